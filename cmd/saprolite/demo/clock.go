@@ -1,0 +1,18 @@
+package demo
+
+import (
+	"time"
+
+	"saprolite/ingest/quantity"
+)
+
+// The invented calendar: fifteen years of history, then two years that arrive
+// day by day. In the first of these the wet season fails.
+var (
+	FirstPast = quantity.DateOf(2040, time.January, 1)
+	FirstLive = quantity.DateOf(2055, time.January, 1)
+	LastLive  = quantity.DateOf(2056, time.December, 31)
+)
+
+// Offset is the island's fixed offset from UTC.
+const Offset = -2 * time.Hour

@@ -1,0 +1,49 @@
+package main
+
+import (
+	"errors"
+	"fmt"
+	"io"
+)
+
+// Exit codes (design 5.9, after sysexits.h).
+const (
+	exitUsage         = 64
+	exitData          = 65
+	exitBug           = 70
+	exitTemporary     = 75
+	exitConfiguration = 78
+)
+
+// exitError carries the exit code a command ends with.
+type exitError struct {
+	code int
+	err  error
+}
+
+func (e *exitError) Error() string { return e.err.Error() }
+func (e *exitError) Unwrap() error { return e.err }
+
+func exitWith(code int, err error) error {
+	if err == nil {
+		return nil
+	}
+	return &exitError{code, err}
+}
+
+// exitCode says an error once, at the edge, and returns its exit code.
+func exitCode(err error, errs io.Writer) int {
+	if err == nil {
+		return 0
+	}
+	fmt.Fprintf(errs, "saprolite: %v\n", err)
+	var exit *exitError
+	var code interface{ ExitCode() int }
+	switch {
+	case errors.As(err, &exit):
+		return exit.code
+	case errors.As(err, &code):
+		return code.ExitCode()
+	}
+	return exitBug
+}

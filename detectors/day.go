@@ -1,0 +1,122 @@
+package detectors
+
+import (
+	"math"
+
+	"saprolite/detectors/climate"
+	"saprolite/detectors/ledger"
+	"saprolite/ingest/quantity"
+)
+
+// Inputs is what is known of one stand-day. What is not known is NaN.
+type Inputs struct {
+	Weather       climate.Weather
+	Precipitation quantity.Millimetres
+	ActualET      quantity.Millimetres // measured, all of it
+	Greenness     quantity.Index       // seen on this day
+}
+
+// NoInputs returns a day of which nothing is known.
+func NoInputs(d quantity.Day) Inputs {
+	nan := math.NaN()
+	w := climate.Unknown()
+	w.Day = d
+	return Inputs{Weather: w, Precipitation: quantity.Millimetres(nan), ActualET: quantity.Millimetres(nan), Greenness: quantity.Index(nan)}
+}
+
+// Set puts a day value where it belongs. It tells whether a stand has a use
+// for the quantity; v is in the canonical unit (design 5.5).
+func (in *Inputs) Set(q quantity.Quantity, v float64) bool {
+	w := &in.Weather
+	switch q {
+	case quantity.Precipitation:
+		in.Precipitation = quantity.Millimetres(v)
+	case quantity.ActualEvapotranspiration:
+		in.ActualET = quantity.Millimetres(v)
+	case quantity.ReferenceEvapotranspiration:
+		w.Given = quantity.Millimetres(v)
+	case quantity.AirTemperature:
+		w.TMean = quantity.Celsius(v)
+	case quantity.AirTemperatureMin:
+		w.TMin = quantity.Celsius(v)
+	case quantity.AirTemperatureMax:
+		w.TMax = quantity.Celsius(v)
+	case quantity.RelativeHumidity:
+		w.RHMean = quantity.Percent(v)
+	case quantity.RelativeHumidityMin:
+		w.RHMin = quantity.Percent(v)
+	case quantity.RelativeHumidityMax:
+		w.RHMax = quantity.Percent(v)
+	case quantity.VapourPressureDeficit:
+		w.VPD = quantity.Kilopascals(v)
+	case quantity.WindSpeed:
+		w.Wind2m = quantity.MetresPerSecond(v)
+	case quantity.SolarRadiation:
+		w.Solar = quantity.Megajoules(v * megajoulesPerWattDay)
+	case quantity.EVI, quantity.EVI2, quantity.NDVI, quantity.NDMI, quantity.FAPAR, quantity.LAI:
+		in.Greenness = quantity.Index(v)
+	default:
+		return false
+	}
+	return true
+}
+
+// A mean of 1 W m-2 over a day is 86400 J m-2 (exact).
+const megajoulesPerWattDay = 0.0864
+
+// Draws are the quantities a stand draws on, vegetation indices apart: of
+// those a stand has one (VegetationIndices).
+var Draws = [...]quantity.Quantity{
+	quantity.Precipitation,
+	quantity.ActualEvapotranspiration,
+	quantity.ReferenceEvapotranspiration,
+	quantity.AirTemperature,
+	quantity.AirTemperatureMin,
+	quantity.AirTemperatureMax,
+	quantity.RelativeHumidity,
+	quantity.RelativeHumidityMin,
+	quantity.RelativeHumidityMax,
+	quantity.VapourPressureDeficit,
+	quantity.WindSpeed,
+	quantity.SolarRadiation,
+}
+
+// VegetationIndices are the indices that can stand for greenness, in the
+// order in which one is taken when the register names none.
+var VegetationIndices = [...]quantity.Quantity{
+	quantity.EVI, quantity.EVI2, quantity.NDVI, quantity.NDMI, quantity.FAPAR, quantity.LAI,
+}
+
+// ETBasis says where a day's actual evapotranspiration came from.
+type ETBasis struct {
+	_ struct{} `cbor:",toarray"`
+
+	Measured  bool
+	Reference climate.Basis // when not measured
+}
+
+// String is the token of the daily file's et_basis column; "" when unknown.
+func (b ETBasis) String() string {
+	if b.Measured {
+		return "measured"
+	}
+	if b.Reference == climate.None {
+		return ""
+	}
+	return b.Reference.String()
+}
+
+// Account is one settled stand-day.
+type Account struct {
+	_ struct{} `cbor:",toarray"`
+
+	Day           quantity.Day
+	Precipitation quantity.Millimetres // NaN: not known
+	ReferenceET   quantity.Millimetres // NaN: not known
+	Flux          ledger.Flux          // NaN where the account stood still
+	Basis         ETBasis
+	Coefficient   float64 // reference x this = demand; NaN when measured
+	Deficit       quantity.Millimetres
+	Greenness     quantity.Index // last accepted, NaN: none
+	Still         bool           // rain or evapotranspiration unknown: the account stood still
+}

@@ -86,8 +86,10 @@ func NewCourier(dest Destination, source Source, books Books, opts CourierOption
 	if err := opts.Schedule.validate(); err != nil {
 		return nil, fmt.Errorf("destination %s: %w", name, err)
 	}
-	if l := opts.Filter.MinLevel; l != "" && l.Rank() == 0 {
-		return nil, fmt.Errorf("destination %s: %q is not a level; use drawing down, low, nearly spent, spent, silent or blind", name, l)
+	for _, l := range opts.Filter.Levels {
+		if l.Rank() == 0 {
+			return nil, fmt.Errorf("destination %s: %q is not a level; use drawing down, low, nearly spent, spent, silent or blind", name, l)
+		}
 	}
 	if opts.Now == nil {
 		opts.Now = time.Now

@@ -71,9 +71,9 @@ func asUndeliverable(err error) *Undeliverable {
 
 // Filter chooses which messages a destination gets. Its zero value is all.
 type Filter struct {
-	Kinds    []finding.Kind // any of these; empty: every kind
-	Groups   []string       // a stand in any of these; empty: every stand
-	MinLevel finding.Level  // this level or a worse one (Level.Rank); empty: every level
+	Kinds  []finding.Kind  // any of these; empty: every kind
+	Groups []string        // a stand in any of these; empty: every stand
+	Levels []finding.Level // any of these; empty: every level
 }
 
 // passes tells whether m goes to the destination. known says that an earlier
@@ -86,7 +86,7 @@ func (f Filter) passes(m Message, known bool) bool {
 	if len(f.Groups) > 0 && !slices.ContainsFunc(f.Groups, func(g string) bool { return slices.Contains(m.Groups, g) }) {
 		return known // a stand may leave its group while an episode is open
 	}
-	return known || m.Level.Rank() >= f.MinLevel.Rank()
+	return known || len(f.Levels) == 0 || slices.Contains(f.Levels, m.Level)
 }
 
 // EventKind is what happened to a message on its way.

@@ -103,7 +103,7 @@ func (l *loader) embedded(s *section) *Embedded {
 func (l *loader) remote(s *section) *Remote {
 	s.required("urls", `write urls: ["tls://broker.example.org:4222"]`)
 	r := &Remote{URLs: s.texts("urls", natsURL)}
-	if n := s.node.get("urls"); n != nil && n.kind == list && len(n.items) == 0 {
+	if n := s.node.get("urls"); n != nil && n.kind == list && len(n.list()) == 0 {
 		s.complainAt("urls", "none is listed", `write urls: ["tls://broker.example.org:4222"]`)
 	}
 	r.Credentials = l.existing(s, "credentials", "write the path of the .creds file the broker's operator gave you")

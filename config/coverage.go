@@ -30,7 +30,7 @@ type Coverage struct {
 
 // Answer is one question, whether it can be answered, and by what.
 type Answer struct {
-	Question string // "rain", "water use", "account", "storage limit", "greenness", "water potential"
+	Question string // "rain", "account", "storage limit", "greenness", "water potential"
 	Can      Can
 	Says     string
 }
@@ -78,14 +78,11 @@ func (r *Register) Coverage(stand *Stand) Coverage {
 	more := func(text string) { c.OneMore = append(c.OneMore, text) }
 
 	rain := v.rain(more)
-	use, how := v.waterUse(more)
-	account := Answer{"account", Yes, how}
-	if rain.Can != Yes {
-		account = Answer{"account", rain.Can, "rain must come in; water use then " + how}
-	} else if use.Can != Yes {
-		account = Answer{"account", use.Can, use.Says}
+	account := v.account(more)
+	if account.Can == Yes && rain.Can != Yes {
+		account.Can, account.Says = rain.Can, "rain must come in; water use "+account.Says
 	}
-	c.Answers = []Answer{rain, use, account, v.limit(), v.greenness(more), v.potential(more)}
+	c.Answers = []Answer{rain, account, v.limit(), v.greenness(more), v.potential(more)}
 	return c
 }
 
@@ -131,84 +128,98 @@ func (v viewer) rain(more func(string)) Answer {
 	return Answer{"rain", Yes, says}
 }
 
-// waterUse follows the order of preference of the account: measured, reference
-// as given, Penman-Monteith, Hargreaves, monthly values (methods.md A.1, A.2).
-func (v viewer) waterUse(more func(string)) (use Answer, how string) {
+// account says where water use comes from, in the account's order of
+// preference: measured, reference as given, Penman-Monteith, Hargreaves,
+// monthly values (methods.md A.1, A.2 and decisions).
+func (v viewer) account(more func(string)) Answer {
 	const measured = "measured evapotranspiration (a flux tower or a satellite product): water use seen, not modelled, which also makes a storage limit firmer"
 	if d, ok := v.source(quantity.ActualEvapotranspiration); ok {
-		how = "by measured evapotranspiration of " + v.here(d)
-		return Answer{"water use", Yes, how}, how
+		return Answer{"account", Yes, "by measured evapotranspiration of " + v.here(d)}
 	}
+	defer more(measured) // after what the weather asks for
 	if d, ok := v.source(quantity.ReferenceEvapotranspiration); ok {
-		more(measured)
-		how = "by the reference evapotranspiration given by " + d.String()
-		return Answer{"water use", Yes, how}, how
+		return Answer{"account", Yes, "by the reference evapotranspiration given by " + d.String()}
 	}
 	low, lowOK := v.source(quantity.AirTemperatureMin)
 	high, highOK := v.source(quantity.AirTemperatureMax)
 	if lowOK && highOK {
-		how = v.fromTemperatures(low, high, more)
-		more(measured)
-		return Answer{"water use", Yes, how}, how
+		return Answer{"account", Yes, v.fromTemperatures(low, high, more)}
 	}
 	more("a thermometer that lists air_temperature_min and air_temperature_max (a daily mean alone is not enough): water use by Hargreaves")
-	more(measured)
 	if v.stand.MonthlyReferenceET != nil {
-		how = "by the 12 monthly values of the register, the last resort, with a wide interval"
-		return Answer{"water use", Yes, how}, how
+		return Answer{"account", Yes, "by the 12 monthly values of the register, the last resort, with a wide interval"}
 	}
-	how = "by measured evapotranspiration, or by air_temperature_min and _max; without either give monthly_reference_et_mm"
-	return Answer{"water use", IfSent, how}, how
+	return Answer{"account", IfSent, "as precipitation with actual_evapotranspiration, or with air_temperature_min and _max; without these give monthly_reference_et_mm"}
 }
 
+// fromTemperatures tells Penman-Monteith, which wants the stand's height and
+// at least two of radiation, humidity and wind, from Hargreaves.
 func (v viewer) fromTemperatures(low, high Draw, more func(string)) string {
-	from := low.String()
-	if high.Source != low.Source {
-		from += " and " + high.String()
-	}
-	var have, lack []string
+	temperatures := distinct(low, high)
+	weather := []Draw{low, high}
+	var lack []string
 	for _, need := range []struct {
 		word string
-		by   []quantity.Quantity
+		by   [][]quantity.Quantity // any of these, each whole
 	}{
-		{"solar_radiation", []quantity.Quantity{quantity.SolarRadiation}},
-		{"relative_humidity", []quantity.Quantity{quantity.RelativeHumidity, quantity.VapourPressureDeficit}},
-		{"wind_speed", []quantity.Quantity{quantity.WindSpeed}},
+		{"solar_radiation", [][]quantity.Quantity{{quantity.SolarRadiation}}},
+		{"relative_humidity", [][]quantity.Quantity{{quantity.RelativeHumidityMin, quantity.RelativeHumidityMax}, {quantity.RelativeHumidity}, {quantity.VapourPressureDeficit}}},
+		{"wind_speed", [][]quantity.Quantity{{quantity.WindSpeed}}},
 	} {
-		_, d, ok := v.first(need.by...)
-		if need.word == "relative_humidity" && !ok {
-			d, ok = v.source(quantity.RelativeHumidityMin)
-			_, both := v.source(quantity.RelativeHumidityMax)
-			ok = ok && both
-		}
-		switch {
-		case !ok:
+		if draws := v.whole(need.by); draws != nil {
+			weather = append(weather, draws...)
+		} else {
 			lack = append(lack, need.word)
-		case !slices.Contains(have, d.Source):
-			have = append(have, d.Source)
 		}
 	}
 	height := !math.IsNaN(float64(v.stand.Elevation))
 	switch {
-	case len(lack) == 0 && height:
-		return "by Penman-Monteith from temperatures of " + from + ", the rest of " + strings.Join(have, ", ")
-	case len(lack) == 1 && height:
-		more(lack[0] + ": Penman-Monteith without an assumption")
-		return "by Penman-Monteith from temperatures of " + from + ", the rest of " + strings.Join(have, ", ") + ", " + lack[0] + " assumed"
-	case len(lack) <= 1:
-		more("elevation_m of the stand: water use by Penman-Monteith")
-	default:
-		also := ""
-		if !height {
-			also = ", with elevation_m of the stand"
-		}
+	case len(lack) > 1:
 		what := strings.Join(lack, " or ")
 		if len(lack) == 3 {
 			what = "two of " + strings.Join(lack, ", ")
 		}
-		more(what + also + ": water use by Penman-Monteith")
+		if !height {
+			what += ", with elevation_m of the stand"
+		}
+		more(what + ": water use by Penman-Monteith")
+	case !height:
+		more("elevation_m of the stand: water use by Penman-Monteith")
+	case len(lack) == 1:
+		more(lack[0] + ": Penman-Monteith without an assumption")
+		return "by Penman-Monteith from the weather of " + distinct(weather...) + ", " + lack[0] + " assumed"
+	default:
+		return "by Penman-Monteith from the weather of " + distinct(weather...)
 	}
-	return "by Hargreaves from temperatures of " + from
+	return "by Hargreaves from temperatures of " + temperatures
+}
+
+// whole returns the sources of the first set of quantities of which each has a
+// written one.
+func (v viewer) whole(sets [][]quantity.Quantity) []Draw {
+	for _, set := range sets {
+		var draws []Draw
+		for _, q := range set {
+			if d, ok := v.source(q); ok {
+				draws = append(draws, d)
+			}
+		}
+		if len(draws) == len(set) {
+			return draws
+		}
+	}
+	return nil
+}
+
+// distinct names each source once.
+func distinct(draws ...Draw) string {
+	var names []string
+	for _, d := range draws {
+		if name := d.String(); !slices.Contains(names, name) {
+			names = append(names, name)
+		}
+	}
+	return strings.Join(names, " and ")
 }
 
 // limit says what is known of the storage limit (methods.md, decisions: "No
@@ -249,8 +260,8 @@ func (v viewer) potential(more func(string)) Answer {
 // here names a source of what only the stand itself can show, and says so when
 // it stands elsewhere.
 func (v viewer) here(d Draw) string {
-	if d.DistanceKM > sameStandKM {
-		return d.String() + ": measured elsewhere; name the right source under sources if there is one"
+	if d.Why == whyNear && d.DistanceKM > sameStandKM {
+		return d.String() + ": another stand's, the nearest there is; name the right source under sources if this is not meant"
 	}
 	return d.String()
 }

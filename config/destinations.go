@@ -88,7 +88,7 @@ func (l *loader) mail(s *section) *Mail {
 		Password: l.secret(s, "password_file"),
 		Plain:    s.text("tls", "starttls", oneOf("starttls", "none")) == "none",
 	}
-	if to := s.node.get("to"); to != nil && to.kind == list && len(to.items) == 0 {
+	if to := s.node.get("to"); to != nil && to.kind == list && len(to.list()) == 0 {
 		s.complainAt("to", "nobody is listed", "write who shall read the messages")
 	}
 	user, password := s.node.get("username") != nil, s.node.get("password_file") != nil

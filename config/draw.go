@@ -95,6 +95,9 @@ func (d Draw) String() string {
 	if d.DistanceKM == 0 && d.HeightM == 0 {
 		return d.Source
 	}
+	if math.IsNaN(d.DistanceKM) && math.IsNaN(d.HeightM) {
+		return d.Source + " (place unknown)"
+	}
 	where := "distance unknown"
 	if !math.IsNaN(d.DistanceKM) {
 		where = fmt.Sprintf("%.1f km", d.DistanceKM)
@@ -136,9 +139,11 @@ func (r *Register) nearest(stand *Stand, q quantity.Quantity) []string {
 	var ids [mostDrawn]string
 	var scores [mostDrawn]float64
 	n, limit := 0, chord2Of(reachKM)
-	for _, c := range r.nearby[q.Base()] {
-		far := chord2(here, c.direction)
-		if far > limit || c.id == stand.ID || !matches(c.listed, q) {
+	base := q.Base()
+	candidates := r.nearby[base]
+	for i := range candidates {
+		c := &candidates[i]
+		if chord2(here, c.direction) > limit || c.id == stand.ID || q != base && !matches(c.listed, q) {
 			continue
 		}
 		km := distanceKM(here, c.direction)

@@ -136,11 +136,12 @@ func monthly(p *section) *[12]quantity.Millimetres {
 		return nil
 	}
 	var out [12]quantity.Millimetres
-	if len(n.items) != len(out) {
-		p.complain(n.at, p.field(name), fmt.Sprintf("want 12 numbers, got %d", len(n.items)), "write the month's total of reference evapotranspiration, January to December, in mm")
+	items := n.list()
+	if len(items) != len(out) {
+		p.complain(n.at, p.field(name), fmt.Sprintf("want 12 numbers, got %d", len(items)), "write the month's total of reference evapotranspiration, January to December, in mm")
 		return nil
 	}
-	for i, item := range n.items {
+	for i, item := range items {
 		switch {
 		case item.kind != number:
 			p.complain(item.at, p.field(name), "want a number, got "+item.noun(), "write the month's total in mm")
@@ -198,7 +199,7 @@ func (r *reading) sources(p *section) map[quantity.Quantity][]string {
 			continue
 		}
 		ids := sec.texts(f.name, isID)
-		if f.value.kind == list && len(f.value.items) == 0 {
+		if f.value.kind == list && len(f.value.list()) == 0 {
 			sec.complain(f.value.at, sec.field(f.name), "an empty list", "name a source, or remove the line to take the nearest")
 		}
 		if len(ids) == 0 {
@@ -206,7 +207,7 @@ func (r *reading) sources(p *section) map[quantity.Quantity][]string {
 		}
 		q, _ := quantity.Parse(f.name) // known, see above
 		out[q] = ids
-		for _, item := range append([]node{f.value}, f.value.items...) {
+		for _, item := range append([]node{f.value}, f.value.list()...) {
 			if item.kind == text {
 				r.named = append(r.named, naming{item.at, sec.field(f.name), q, item.text})
 			}

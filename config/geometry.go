@@ -87,11 +87,12 @@ func (s *section) geometry(types ...string) (g Geometry, ok bool) {
 	case "Polygon":
 		g.Polygons = [][][]Position{s.polygon(coordinates, path)}
 	case "MultiPolygon":
-		if len(coordinates.items) == 0 {
+		polygons := coordinates.list()
+		if len(polygons) == 0 {
 			s.complain(coordinates.at, path, "empty", "draw the stand, or give its middle as a Point")
 		}
-		for i := range coordinates.items {
-			g.Polygons = append(g.Polygons, s.polygon(&coordinates.items[i], path))
+		for i := range polygons {
+			g.Polygons = append(g.Polygons, s.polygon(&polygons[i], path))
 		}
 	}
 	if len(s.problems) == before && g.hectares() <= 0 {
@@ -101,16 +102,17 @@ func (s *section) geometry(types ...string) (g Geometry, ok bool) {
 }
 
 func (s *sheet) polygon(n *node, path string) (rings [][]Position) {
-	if n.kind != list || len(n.items) == 0 {
+	items := n.list()
+	if n.kind != list || len(items) == 0 {
 		s.complain(n.at, path, "want a list of rings, got "+n.noun(), "a polygon is [[[longitude, latitude], ...]]: one outer ring, then its holes")
 		return nil
 	}
-	if first := &n.items[0]; first.kind == list && len(first.items) > 0 && first.items[0].kind == number {
+	if first := &items[0]; first.numbers != nil {
 		s.complain(first.at, path, "want a ring (a list of positions), got a position", "a polygon is [[[longitude, latitude], ...]]: mind the three brackets")
 		return nil
 	}
-	for i := range n.items {
-		rings = append(rings, s.ring(&n.items[i], path))
+	for i := range items {
+		rings = append(rings, s.ring(&items[i], path))
 	}
 	return rings
 }
@@ -120,9 +122,10 @@ func (s *sheet) ring(n *node, path string) []Position {
 		s.complain(n.at, path, "want a ring (a list of positions), got "+n.noun(), "a polygon is [[[longitude, latitude], ...]]: mind the three brackets")
 		return nil
 	}
-	ring := make([]Position, 0, len(n.items))
-	for i := range n.items {
-		p, ok := s.position(&n.items[i], path)
+	items := n.list()
+	ring := make([]Position, 0, len(items))
+	for i := range items {
+		p, ok := s.position(&items[i], path)
 		if !ok {
 			return nil // one wrong position of a ring is enough; the rest is likely wrong alike
 		}
@@ -156,27 +159,26 @@ func (s *sheet) position(n *node, path string) (p Position, ok bool) {
 		s.complain(n.at, path, "want a position, got "+n.noun(), "write [longitude, latitude]")
 		return p, false
 	}
-	for _, item := range n.items {
-		if item.kind != number {
-			s.complain(item.at, path, "a position holds numbers, got "+item.noun(), "write [longitude, latitude]; mind the number of brackets")
-			return p, false
-		}
-	}
-	if len(n.items) != 2 && len(n.items) != 3 {
-		s.complain(n.at, path, fmt.Sprintf("a position has 2 numbers, or 3 with a height, got %d", len(n.items)), "write [longitude, latitude]")
+	numbers, other := n.bare()
+	if other != nil {
+		s.complain(other.at, path, "a position holds numbers, got "+other.noun(), "write [longitude, latitude]; mind the number of brackets")
 		return p, false
 	}
-	longitude, latitude := n.items[0].number, n.items[1].number
-	off := fmt.Sprintf("longitude %v, latitude %v is out of range", longitude, latitude)
-	switch {
-	case math.Abs(longitude) <= 180 && math.Abs(latitude) <= 90:
-		return Position{longitude, latitude}, true
-	case math.Abs(longitude) <= 90 && math.Abs(latitude) <= 180:
-		s.complain(n.at, path, off, fmt.Sprintf("GeoJSON has longitude first: swap them to [%v, %v]", latitude, longitude))
-	case math.Abs(longitude) > 360 || math.Abs(latitude) > 360:
-		s.complain(n.at, path, off, "these look like metres of a projection: export as WGS 84 (EPSG:4326), degrees")
-	default:
-		s.complain(n.at, path, off, "want longitude -180 to 180 and latitude -90 to 90 (WGS 84)")
+	if len(numbers) != 2 && len(numbers) != 3 {
+		s.complain(n.at, path, fmt.Sprintf("a position has 2 numbers, or 3 with a height, got %d", len(numbers)), "write [longitude, latitude]")
+		return p, false
 	}
+	longitude, latitude := numbers[0], numbers[1]
+	if math.Abs(longitude) <= 180 && math.Abs(latitude) <= 90 {
+		return Position{longitude, latitude}, true
+	}
+	cure := "want longitude -180 to 180 and latitude -90 to 90 (WGS 84)"
+	switch {
+	case math.Abs(longitude) <= 90 && math.Abs(latitude) <= 180:
+		cure = fmt.Sprintf("GeoJSON has longitude first: swap them to [%v, %v]", latitude, longitude)
+	case math.Abs(longitude) > 360 || math.Abs(latitude) > 360:
+		cure = "these look like metres of a projection: export as WGS 84 (EPSG:4326), degrees"
+	}
+	s.complain(n.at, path, fmt.Sprintf("longitude %v, latitude %v is out of range", longitude, latitude), cure)
 	return p, false
 }

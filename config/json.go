@@ -5,6 +5,7 @@ import (
 	"encoding/json"
 	"errors"
 	"fmt"
+	"slices"
 	"strconv"
 	"unicode/utf8"
 )
@@ -56,8 +57,10 @@ type walker struct {
 	*sheet
 	data      []byte
 	pos       int
-	line      int // of pos
-	lineStart int // offset at which that line begins
+	line      int       // of pos
+	lineStart int       // offset at which that line begins
+	open      []node    // values of lists not yet closed, so that a list is allocated once, at its length
+	numbers   []float64 // of lists of numbers; cut from a common piece
 }
 
 // next skips white space and separators and returns the first byte of what
@@ -91,10 +94,7 @@ func (w *walker) value() node {
 		w.pos++
 	case '[':
 		n.kind = list
-		for w.pos++; w.next() != ']'; {
-			n.items = append(n.items, w.value())
-		}
-		w.pos++
+		w.list(&n)
 	case '"':
 		n.kind, n.text = text, w.string()
 	case 't':
@@ -109,15 +109,45 @@ func (w *walker) value() node {
 	return n
 }
 
+func (w *walker) list(n *node) {
+	first, bare := len(w.open), true
+	for w.pos++; w.next() != ']'; {
+		item := w.value()
+		bare = bare && item.kind == number
+		w.open = append(w.open, item)
+	}
+	w.pos++
+	items := w.open[first:]
+	switch {
+	case len(items) == 0:
+	case bare:
+		if cap(w.numbers)-len(w.numbers) < len(items) {
+			w.numbers = make([]float64, 0, max(len(items), 4096))
+		}
+		from := len(w.numbers)
+		for i := range items {
+			w.numbers = append(w.numbers, items[i].number)
+		}
+		n.numbers = w.numbers[from:len(w.numbers):len(w.numbers)]
+	default:
+		n.items = slices.Clone(items)
+	}
+	w.open = w.open[:first]
+}
+
 func (w *walker) number(at place) float64 {
 	start := w.pos
-	for w.pos < len(w.data) && bytes.IndexByte([]byte("+-.0123456789Ee"), w.data[w.pos]) >= 0 {
-		w.pos++
+digits:
+	for ; w.pos < len(w.data); w.pos++ {
+		switch w.data[w.pos] {
+		case '0', '1', '2', '3', '4', '5', '6', '7', '8', '9', '+', '-', '.', 'e', 'E':
+		default:
+			break digits
+		}
 	}
-	digits := string(w.data[start:w.pos])
-	v, err := strconv.ParseFloat(digits, 64)
+	v, err := strconv.ParseFloat(string(w.data[start:w.pos]), 64)
 	if err != nil { // only the range can be wrong
-		w.complain(at, "", fmt.Sprintf("the number %s is too large", clip(digits)), "correct it")
+		w.complain(at, "", fmt.Sprintf("the number %s is too large", clip(string(w.data[start:w.pos]))), "correct it")
 		return 0
 	}
 	return v

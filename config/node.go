@@ -9,8 +9,11 @@ type node struct {
 	at     place
 	number float64 // of a number
 	text   string  // of a text
-	items  []node  // of a list
-	fields []field // of an object, in the order written
+	items  []node  // of a list; read it by list
+	// numbers are a list in which there is nothing else, which is most of a
+	// GeoJSON file: a tenth of the memory of items.
+	numbers []float64
+	fields  []field // of an object, in the order written
 }
 
 // field is one property of an object.
@@ -55,6 +58,33 @@ func clip(s string) string {
 		return string(r[:most]) + "..."
 	}
 	return s
+}
+
+// list returns the values of a list. Those of bare numbers have the place of
+// the list.
+func (n *node) list() []node {
+	if n.numbers == nil {
+		return n.items
+	}
+	items := make([]node, len(n.numbers))
+	for i, v := range n.numbers {
+		items[i] = node{kind: number, at: n.at, number: v}
+	}
+	return items
+}
+
+// bare returns the numbers of a list, and the first value that is none.
+func (n *node) bare() (numbers []float64, other *node) {
+	if n.numbers != nil {
+		return n.numbers, nil
+	}
+	for i := range n.items {
+		if n.items[i].kind != number {
+			return nil, &n.items[i]
+		}
+		numbers = append(numbers, n.items[i].number)
+	}
+	return numbers, nil
 }
 
 // get finds a property; nil when it is absent or null. Writing null says "not

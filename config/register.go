@@ -134,8 +134,9 @@ func (r *reading) collection(root *node) {
 	if features == nil {
 		return
 	}
-	for i := range features.items {
-		r.feature(&features.items[i], fmt.Sprintf("feature %d", i+1))
+	items := features.list()
+	for i := range items {
+		r.feature(&items[i], fmt.Sprintf("feature %d", i+1))
 	}
 	if len(r.Stands) == 0 && len(r.problems) == 0 {
 		r.complain(features.at, "features", "no stand among them", `write at least one feature without "source": true`)
@@ -238,3 +239,7 @@ func (r *Register) index() {
 	}
 	r.indexNearby()
 }
+
+// Known tells whether a source may speak: it has a feature, is a stand's own
+// id, or is named by a stand.
+func (r *Register) Known(id string) bool { _, ok := r.known[id]; return ok }

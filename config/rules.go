@@ -216,6 +216,8 @@ func showDuration(d time.Duration) string {
 	return d.String()
 }
 
+const knownHere = "known here: "
+
 // suggest names the nearest known word, or all of them when none is near.
 func suggest(word string, known []string) string {
 	best, nearest := math.MaxInt, ""
@@ -234,7 +236,7 @@ func suggest(word string, known []string) string {
 	}
 	known = slices.Clone(known)
 	slices.Sort(known)
-	return "known here: " + strings.Join(slices.Compact(known), ", ")
+	return knownHere + strings.Join(slices.Compact(known), ", ")
 }
 
 // editDistance counts insertions, deletions and replacements of bytes between

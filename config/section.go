@@ -30,7 +30,7 @@ func (s *sheet) section(n *node, path string) *section {
 		return &section{sheet: s, node: &node{kind: object}, path: path}
 	}
 	if n.kind != object {
-		s.complain(n.at, path, "want an object (name: value), got "+n.noun(), "see the example that saprolite init writes")
+		s.complain(n.at, path, "want an object (name: value), got "+n.noun(), "write names with their values")
 		return &section{sheet: s, node: &node{kind: object, at: n.at}, path: path, wrong: true}
 	}
 	sec := &section{sheet: s, node: n, path: path}
@@ -143,7 +143,7 @@ func (s *section) texts(name string, rules ...rule[string]) []string {
 }
 
 func (s *sheet) textsOf(n *node, path string, rules ...rule[string]) []string {
-	items := n.items
+	items := n.list()
 	if n.kind == text {
 		items = []node{*n}
 	} else if n.kind != list {
@@ -175,7 +175,11 @@ func (s *section) done() {
 			s.complain(f.at, s.field(f.name), "not in this version yet", "remove it")
 			continue
 		}
-		s.complain(f.at, s.field(f.name), "unknown", suggest(f.name, s.known))
+		cure := suggest(f.name, s.known)
+		if strings.HasPrefix(cure, knownHere) {
+			cure = "remove it; " + cure
+		}
+		s.complain(f.at, s.field(f.name), "unknown", cure)
 	}
 }
 

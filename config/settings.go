@@ -116,8 +116,9 @@ func (l *loader) list(top *section, name string) []*section {
 		return nil
 	}
 	var out []*section
-	for i := range n.items {
-		out = append(out, l.section(&n.items[i], fmt.Sprintf("%s[%d]", name, i+1)))
+	items := n.list()
+	for i := range items {
+		out = append(out, l.section(&items[i], fmt.Sprintf("%s[%d]", name, i+1)))
 	}
 	return out
 }

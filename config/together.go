@@ -4,7 +4,6 @@ import (
 	"fmt"
 	"maps"
 	"slices"
-	"strings"
 )
 
 // Together returns the mistakes that show only when both files are read: a
@@ -38,7 +37,7 @@ func Together(c *Config, r *Register) Problems {
 	for _, d := range c.Destinations {
 		for _, g := range d.Groups {
 			if !groups[g] {
-				complain(0, c.File, "destination "+d.Name+": groups", fmt.Sprintf("no stand in %s is in group %q", r.File, g), "correct the name: "+strings.Join(slices.Sorted(maps.Keys(groups)), ", "))
+				complain(0, c.File, "destination "+d.Name+": groups", fmt.Sprintf("no stand in %s is in group %q", r.File, g), suggest(g, slices.Sorted(maps.Keys(groups))))
 			}
 		}
 	}

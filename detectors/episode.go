@@ -82,3 +82,7 @@ func (s *Stand) Findings() []finding.Finding {
 	}
 	return list
 }
+
+// Level is the level the store is at by hysteresis, unusual or not; "" when
+// none holds or the limit is unknown.
+func (s *Stand) Level() finding.Level { return s.State.Low.Level }

@@ -60,7 +60,7 @@ func Compose(m alerts.Message, o Options) (*gomail.Msg, error) {
 	}
 	msg := gomail.NewMsg(gomail.WithNoDefaultUserAgent(), gomail.WithBoundary(m.MessageID()+"-parts"))
 	// Not FromFormat: it does not quote a name that holds a quotation mark.
-	msg.FromMailAddress(&mail.Address{Name: strings.TrimSpace("saprolite " + oneLine(o.Place)), Address: o.From})
+	msg.FromMailAddress(&mail.Address{Name: strings.TrimSpace("saprolite " + forHeader(o.Place)), Address: o.From})
 	if err := msg.To(o.To...); err != nil {
 		return nil, fmt.Errorf("composing mail %s: %w", m.MessageID(), err)
 	}
@@ -95,8 +95,8 @@ func Compose(m alerts.Message, o Options) (*gomail.Msg, error) {
 // keep them together. It names the matter, not the level: that changes, and
 // stands in the first line of the text, which a phone shows below the subject.
 func subject(m alerts.Message, place string) string {
-	s := standName(m) + ": " + matter(m.Kind)
-	if p := oneLine(place); p != "" {
+	s := forHeader(standName(m) + ": " + matter(m.Kind))
+	if p := forHeader(place); p != "" {
 		s = "[" + p + "] " + s
 	}
 	if m.Status == alerts.Exercise {
@@ -104,6 +104,10 @@ func subject(m alerts.Message, place string) string {
 	}
 	return s
 }
+
+// forHeader is oneLine without anything that a reader would take for an
+// encoded word of RFC 2047 and decode, perhaps to line ends.
+func forHeader(s string) string { return strings.ReplaceAll(oneLine(s), "=?", "= ?") }
 
 // matter is what a kind is about, in words that fit its end as well.
 func matter(k finding.Kind) string {
@@ -198,8 +202,10 @@ func newView(m alerts.Message, place string) view {
 // when says since when, until when and as of when.
 func when(m alerts.Message) string {
 	switch {
-	case m.MsgType == alerts.Cancel && m.Ended != quantity.NoDay:
-		return "From " + date(m.Onset) + " to " + date(m.Ended)
+	case m.MsgType == alerts.Cancel && m.EndedWhy == alerts.Corrected:
+		return "Told as begun on " + date(m.Onset) + ", withdrawn on " + date(m.Ended)
+	case m.MsgType == alerts.Cancel:
+		return "Began on " + date(m.Onset) + ", ended on " + date(m.Ended)
 	case m.Day == m.Onset || m.Day == quantity.NoDay:
 		return "Since " + date(m.Onset)
 	}

@@ -268,11 +268,16 @@ func TestExerciseAndEndAreMarked(t *testing.T) {
 	m = upperBeck(t)
 	m.MsgType, m.Ended, m.Headline = alerts.Cancel, day(t, "2031-10-09"), "Over since 2031-10-09 (was: nearly spent)."
 	_, text, _ = open(t, write(t, m, options()))
-	if !strings.Contains(text, "From 2 August 2031 to 9 October 2031.") {
+	if !strings.Contains(text, "Began on 2 August 2031, ended on 9 October 2031.") {
 		t.Errorf("an end does not say from when to when:\n%s", text)
 	}
 	if strings.Contains(text, "What to look at") || strings.Contains(text, "What ends it") {
 		t.Error("an end asks for a look or names an end")
+	}
+	m.EndedWhy = alerts.Corrected
+	_, corrected, _ := open(t, write(t, m, options()))
+	if !strings.Contains(corrected, "Told as begun on 2 August 2031, withdrawn on 9 October 2031.") {
+		t.Errorf("a correction does not say what is withdrawn:\n%s", corrected)
 	}
 	if !strings.Contains(text, alerts.Caution) {
 		t.Error("an end comes without the caution: no alarm is no all-clear")
@@ -281,7 +286,10 @@ func TestExerciseAndEndAreMarked(t *testing.T) {
 
 // reliability.md section 2, case 28: injected headers = 0.
 func TestNoHeaderCanBeInjected(t *testing.T) {
-	plain, _, _ := open(t, write(t, upperBeck(t), options()))
+	tame := upperBeck(t)
+	tame.Corrects, tame.Story = "x", "x"
+	plain, tameText, _ := open(t, write(t, tame, options()))
+	lines := strings.Count(tameText, "\n")
 	rapid.Check(t, func(rt *rapid.T) {
 		evil := rapid.SampledFrom([]string{
 			"Upper Beck\r\nBcc: thief@example.net", "Upper Beck\nX-Evil: 1\n\nbody", "\rBcc: a@b",
@@ -310,10 +318,8 @@ func TestNoHeaderCanBeInjected(t *testing.T) {
 		if err != nil || strings.ContainsAny(decoded, "\r\n\x00") {
 			rt.Fatalf("subject decodes to %q (%v)", decoded, err)
 		}
-		for line := range strings.SplitSeq(text, "\r\n") {
-			if strings.HasPrefix(line, "Bcc:") || strings.HasPrefix(line, "X-Evil:") {
-				rt.Fatalf("a line of its own: %q", line)
-			}
+		if got := strings.Count(text, "\n"); got != lines {
+			rt.Fatalf("the text part has %d lines, want %d:\n%s", got, lines, text)
 		}
 	})
 }

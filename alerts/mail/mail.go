@@ -60,7 +60,7 @@ func New(o Options) (*Destination, error) {
 	d := &Destination{opts: o}
 	var errs []error
 	bad := func(format string, args ...any) {
-		errs = append(errs, fmt.Errorf("mail destination "+o.Name+": "+format, args...))
+		errs = append(errs, fmt.Errorf("mail destination %s: %w", o.Name, fmt.Errorf(format, args...)))
 	}
 	host, port, err := net.SplitHostPort(o.Server)
 	if err == nil {
@@ -200,8 +200,8 @@ func (d *Destination) dial(ctx context.Context) (client *smtp.Client, hangUp fun
 			return conn, nil
 		}),
 	}
-	if end, ok := ctx.Deadline(); ok {
-		opts = append(opts, gomail.WithTimeout(max(time.Until(end), time.Second)))
+	if end, ok := ctx.Deadline(); ok { // a little more, so that ctx is what ends it
+		opts = append(opts, gomail.WithTimeout(max(time.Until(end), 0)+time.Second))
 	}
 	if d.opts.TLS == NoTLS {
 		opts = append(opts, gomail.WithTLSPolicy(gomail.NoTLS))

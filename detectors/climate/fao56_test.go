@@ -25,7 +25,9 @@ func compare(t *testing.T, table []printed) {
 	}
 }
 
-// Every number is printed in FAO-56, chapter 3, in the example named.
+// The numbers are those of FAO-56, chapter 3, in the example named. They were
+// read in the text or in programs that quote it, but for these, quoted from
+// memory: examples 6 and 12 (Rn).
 func TestFAO56Chapter3(t *testing.T) {
 	rio := ExtraterrestrialRadiation(-22.9, 135) // 15 May
 	lyon := ExtraterrestrialRadiation(45.72, 196)
@@ -99,7 +101,7 @@ func TestFAO56Example17Bangkok(t *testing.T) {
 		{"slope (13), kPa/degC", terms.Slope, 0.246, 0.0005},
 		{"gamma (8), kPa/degC", terms.Psychrometric, 0.0674, 0.0001},
 		{"es (12), kPa", float64(MeanSaturationVapourPressure(low, high)), 4.42, 0.005},
-		{"es - ea, kPa", float64(terms.VPD), 1.57, 0.005},
+		{"es - ea, kPa", float64(terms.VPD), 1.57, 0.005}, // quoted from memory
 		{"Ra (21), MJ", float64(ra), 38.06, 0.005},
 		{"daylight (34), h", DaylightHours(latitude, day), 12.31, 0.005},
 		{"Rs (35), MJ", float64(rs), 22.65, 0.005},
@@ -147,7 +149,7 @@ func TestFAO56Example18Uccle(t *testing.T) {
 		{"daylight (34), h", DaylightHours(latitude, j), 16.1, 0.05},
 		{"Rs (35), MJ", float64(rs), 22.07, 0.005},
 		{"Rso (37), MJ", float64(rso), 30.90, 0.005},
-		{"Rns (38), MJ", float64(NetShortwave(rs)), 17.00, 0.005},
+		{"Rns (38), MJ", float64(NetShortwave(rs)), 17.00, 0.005}, // quoted from memory
 		{"Rnl (39), MJ", float64(rnl), 3.71, 0.005},
 		{"Rn (40), MJ", float64(NetShortwave(rs) - rnl), 13.28, 0.005},
 		{"ET0 (6), mm/d", float64(et), 3.88, 0.005},
@@ -208,7 +210,8 @@ func TestFAO56Example20Lyon(t *testing.T) {
 	})
 }
 
-// FAO-56, annex 2.
+// FAO-56, annex 2. Table 2.6 was read; the digits of the others are quoted from
+// memory.
 func TestFAO56Tables(t *testing.T) {
 	var table []printed
 	add := func(name string, f func(float64) float64, at, want []float64, tol float64) {

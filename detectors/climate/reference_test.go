@@ -90,6 +90,70 @@ func TestReferenceFromEachKindOfHumidity(t *testing.T) {
 	}
 }
 
+// Air can hold no more than saturation and no less than nothing: sensors that
+// read 105 % in fog, and deficits from a warmer place, stay within.
+func TestHumidityStaysWithinItsBounds(t *testing.T) {
+	site := Site{Latitude: 50.8, Elevation: 100}
+	with := func(change func(*Weather)) quantity.Millimetres {
+		w := fullDay()
+		w.RHMin, w.RHMax, w.RHMean, w.VPD = quantity.Percent(nan), quantity.Percent(nan), quantity.Percent(nan), quantity.Kilopascals(nan)
+		change(&w)
+		et, basis := Reference(&site, &w)
+		if basis != ByPenmanMonteith {
+			t.Errorf("basis %v", basis)
+		}
+		return et
+	}
+	fog := with(func(w *Weather) { w.RHMean = 100 })
+	if et := with(func(w *Weather) { w.RHMean = 105 }); et != fog {
+		t.Errorf("at 105 %% mean %v, at 100 %% %v", float64(et), float64(fog))
+	}
+	if et := with(func(w *Weather) { w.RHMin, w.RHMax = 102, 105 }); et != fog {
+		t.Errorf("at 102 to 105 %% %v, at 100 %% %v", float64(et), float64(fog))
+	}
+	if dry, et := with(func(w *Weather) { w.RHMean = 0 }), with(func(w *Weather) { w.VPD = 9 }); et != dry {
+		t.Errorf("at a deficit beyond saturation %v, in dry air %v", float64(et), float64(dry))
+	}
+}
+
+// Without a pyranometer, radiation is that of equation 50, but never more than
+// a clear sky lets through.
+func TestRadiationFromTheTemperatureRange(t *testing.T) {
+	site := Site{Latitude: 50.8, Elevation: 100}
+	ra := ExtraterrestrialRadiation(50.8, 187)
+	for _, c := range []struct {
+		high quantity.Celsius
+		rs   quantity.Megajoules
+	}{
+		{21.5, SolarFromTemperatureRange(ra, 12.3, 21.5, 0.16)},
+		{42.3, ClearSkyRadiation(ra, 100)}, // a range of 30 degC: 0.88 Ra by equation 50
+	} {
+		w := fullDay()
+		w.TMax, w.Solar = c.high, quantity.Megajoules(nan)
+		without, basis := Reference(&site, &w)
+		w.Solar = c.rs
+		if with, _ := Reference(&site, &w); basis != ByPenmanMonteithNoSolar || with != without {
+			t.Errorf("up to %v: %v by %v, with that radiation measured %v", c.high, float64(without), basis, float64(with))
+		}
+	}
+}
+
+// The polar night has no clearness to measure, and a bright day is no clearer
+// than clear.
+func TestClearnessAtItsEnds(t *testing.T) {
+	if got, want := NetLongwave(-30, -20, 0.05, 0, 0), NetLongwave(-30, -20, 0.05, 0.5, 1); got != want {
+		t.Errorf("polar night %v, want %v as under half clearness", float64(got), float64(want))
+	}
+	if got, want := NetLongwave(10, 20, 1, 25, 20), NetLongwave(10, 20, 1, 20, 20); got != want {
+		t.Errorf("brighter than clear %v, want %v as under a clear sky", float64(got), float64(want))
+	}
+	w := fullDay()
+	w.Day, w.TMin, w.TMax, w.Solar = quantity.DateOf(2015, 12, 21), -30, -20, 0
+	if et, basis := Reference(&Site{Latitude: 80, Elevation: 100}, &w); basis != ByPenmanMonteith || !(et >= 0) {
+		t.Errorf("polar night: %v by %v", float64(et), basis)
+	}
+}
+
 func TestReferenceOfMonthsAndLeapYears(t *testing.T) {
 	site := Site{Monthly: &[12]quantity.Millimetres{31, 58, 31, 30, 31, 30, 31, 31, 30, 31, 30, 62}}
 	w := Unknown()
@@ -116,6 +180,11 @@ func TestReferenceUnknown(t *testing.T) {
 	w = fullDay()
 	if et, basis := Reference(&Site{Latitude: 50.8, Elevation: quantity.Metres(nan)}, &w); basis != ByHargreaves || !(et > 0) {
 		t.Errorf("height unknown: %v by %v, want Hargreaves, which needs none", et, basis)
+	}
+	frost := Unknown()
+	frost.Day, frost.TMin, frost.TMax = quantity.DateOf(2015, 1, 6), -30, -20 // mean under Hargreaves' -17.8
+	if et, basis := Reference(&Site{Latitude: 50.8}, &frost); et != 0 || basis != ByHargreaves {
+		t.Errorf("hard frost: %v by %v, want 0", et, basis)
 	}
 	w.Given = -0.2
 	if et, basis := Reference(&Site{}, &w); et != 0 || basis != Given {

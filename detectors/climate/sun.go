@@ -46,7 +46,7 @@ func ExtraterrestrialRadiation(latitude quantity.Degrees, yearDay int) quantity.
 	phi, delta, sunset := radians(latitude), Declination(yearDay), SunsetHourAngle(latitude, yearDay)
 	ra := minutesPerDay / math.Pi * solarConstant * InverseDistance(yearDay) *
 		(sunset*math.Sin(phi)*math.Sin(delta) + math.Cos(phi)*math.Cos(delta)*math.Sin(sunset))
-	return quantity.Megajoules(max(0, ra)) // rounding can leave -1e-17 in the polar night
+	return quantity.Megajoules(max(0, ra)) // rounding can leave a hair below 0 at the edge of the polar night
 }
 
 // DaylightHours returns N, the hours between sunrise and sunset (equation 34).

@@ -44,12 +44,13 @@ func UnknownLimit(reason string) Limit {
 // stressed demand they would stop at the capacity that was assumed.
 //
 // The interval is of that 20-year deficit under the spread of so few years
-// only: what is wrong with the deficits themselves comes on top. Low is not
-// below 0. It is not raised to the largest deficit seen either: n years pass
-// the 20-year level with chance 1 - 0.95^n, 23 % at 5 years and 64 % at 20, so
-// the largest is no lower bound of it, and the interval would miss too often.
-// (It is a lower bound of the store itself, if the stand came through
-// unharmed.) Equal maxima have no spread; all three are then that maximum.
+// only: what is wrong with the deficits themselves comes on top. Low needs no
+// floor at 0, since z95 is far below the reduced variate of 20 years. It is not
+// raised to the largest deficit seen: n years pass the 20-year level with
+// chance 1 - 0.95^n, 23 % at 5 years and 64 % at 20, so the largest is no lower
+// bound of it, and the interval would miss too often. (It is a lower bound of
+// the store itself, if the stand came through unharmed.) Equal maxima have no
+// spread; all three are then that maximum.
 func LimitFromMaxima(maxima []float64) Limit {
 	years := make([]float64, 0, len(maxima))
 	for _, m := range maxima {
@@ -70,7 +71,7 @@ func LimitFromMaxima(maxima []float64) Limit {
 	z05, z95 := pivot(n)
 	return Limit{
 		Value: quantity.Millimetres(level),
-		Low:   quantity.Millimetres(max(0, level-z95*g.Beta)),
+		Low:   quantity.Millimetres(level - z95*g.Beta),
 		High:  quantity.Millimetres(level - z05*g.Beta),
 		Basis: fmt.Sprintf("largest deficit of %d years, from the maxima of %d complete years", ReturnPeriod, n),
 	}

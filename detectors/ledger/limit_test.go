@@ -30,9 +30,8 @@ func TestLimitNeedsFiveYears(t *testing.T) {
 	}
 }
 
-// Maxima of a Gumbel distribution made by formula, 35 years; the value is that
-// of the stat package's own published checks: L-moment fit and return level of
-// Uccle's yearly rain (there with its source).
+// Uccle's yearly maxima of rain, as in the stat package's tests, where the data
+// and the 20-year level have their source.
 func TestLimitUccle(t *testing.T) {
 	l := LimitFromMaxima([]float64{33.8, 27.7, 60.0, 24.0, 72.3, 50.7, 18.7, 41.2, 26.6, 27.2, 23.8, 19.8,
 		34.3, 28.2, 51.1, 37.5, 34.3, 22.2, 35.6, 34.2, 24.3, 20.3, 48.0, 32.4, 59.6, 60.4, 27.0, 45.8,

@@ -101,8 +101,8 @@ func UnknownFlux() Flux {
 // modelled day until rain refills it.
 //
 // A day that is not known (Input) leaves the account as it is and returns
-// UnknownFlux; so does a negative rain, reference or coefficient. Day does not
-// allocate.
+// UnknownFlux; a rain, reference or coefficient below 0 counts as not known.
+// Day does not allocate.
 func (s *Store) Day(in Input, p *Params) Flux {
 	if !in.known() {
 		return UnknownFlux()

@@ -5,6 +5,7 @@ import (
 	"testing"
 
 	"github.com/fxamacker/cbor/v2"
+	"gonum.org/v1/gonum/floats"
 	"pgregory.net/rapid"
 
 	"saprolite/ingest/quantity"
@@ -23,12 +24,18 @@ func given(rain, et mm) Input {
 	return Input{Rain: rain, ReferenceET: unknown, Coefficient: math.NaN(), GivenET: et}
 }
 
+// draw draws a number as data have it, with three decimals; numbers like 1e-300
+// would test float64 and not the account.
+func draw(t *rapid.T, least, most int, name string) float64 {
+	return float64(rapid.IntRange(least*1000, most*1000).Draw(t, name)) / 1000
+}
+
 // drawParams draws stores from far too small to never short.
 func drawParams(t *rapid.T) *Params {
 	p := &Params{
-		CanopyStore: mm(rapid.Float64Range(0, 4).Draw(t, "canopy store")),
-		Capacity:    mm(rapid.Float64Range(1, 800).Draw(t, "capacity")),
-		StressAt:    rapid.Float64Range(0, 1).Draw(t, "stress at"),
+		CanopyStore: mm(draw(t, 0, 4, "canopy store")),
+		Capacity:    mm(draw(t, 1, 800, "capacity")),
+		StressAt:    draw(t, 0, 1, "stress at"),
 	}
 	if rapid.IntRange(0, 4).Draw(t, "never short") == 0 {
 		p.Capacity = unknown
@@ -48,12 +55,12 @@ const (
 
 func drawDays(t *rapid.T, k kind, most int) []Input {
 	one := rapid.Custom(func(t *rapid.T) Input {
-		in := modelled(0, mm(rapid.Float64Range(0, 12).Draw(t, "reference")), rapid.Float64Range(0, 1.3).Draw(t, "coefficient"))
+		in := modelled(0, mm(draw(t, 0, 12, "reference")), draw(t, 0, 2, "coefficient"))
 		if rapid.IntRange(0, 2).Draw(t, "wet") == 0 {
-			in.Rain = mm(rapid.Float64Range(0, 120).Draw(t, "rain"))
+			in.Rain = mm(draw(t, 0, 120, "rain"))
 		}
 		if k == onlyGiven || k == both && rapid.Bool().Draw(t, "given") {
-			in.GivenET = mm(rapid.Float64Range(-1, 10).Draw(t, "given ET"))
+			in.GivenET = mm(draw(t, -1, 10, "given ET"))
 			if rapid.Bool().Draw(t, "no reference") {
 				in.ReferenceET, in.Coefficient = unknown, math.NaN()
 			}
@@ -195,7 +202,7 @@ func TestWaterIsConservedAndBounded(t *testing.T) {
 			for name, v := range map[string]mm{
 				"deficit": s.Deficit, "canopy": s.Canopy, "input": f.Input, "interception": f.Interception,
 				"actual ET": f.ActualET, "overflow": f.Overflow, "root zone's ET": f.ActualET - f.Interception + 1e-12,
-				"discarded": f.Discarded, "room in the canopy": p.CanopyStore - s.Canopy,
+				"discarded": f.Discarded, "room in the canopy": p.CanopyStore - s.Canopy + 1e-12,
 			} {
 				if !(v >= 0) {
 					t.Fatalf("day %d: %s %v", i, name, float64(v))
@@ -214,20 +221,21 @@ func TestWaterIsConservedAndBounded(t *testing.T) {
 	})
 }
 
-// Forty years of days in a row: sums of 14610 rounded numbers still close.
+// Forty years of days in a row still close. The sums are compensated, so that
+// what is left is the account's own rounding.
 func TestWaterIsConservedOverFortyYears(t *testing.T) {
 	rapid.Check(t, func(t *rapid.T) {
 		p, season := drawParams(t), drawDays(t, both, 365)
 		var s Store
-		var rain, et, over, kept mm
+		var flows []float64
 		for i := range 40*365 + 10 {
 			in := season[i%len(season)]
 			f := s.Day(in, p)
-			rain, et, over = rain+in.Rain, et+f.ActualET, over+f.Overflow
+			flows = append(flows, float64(in.Rain), -float64(f.ActualET), -float64(f.Overflow))
 		}
-		kept = s.Canopy - s.Deficit
-		if off := float64(rain - et - over - kept); math.Abs(off) > 1e-6 {
-			t.Fatalf("%v mm lost of %v mm of rain", off, float64(rain))
+		flows = append(flows, float64(s.Deficit), -float64(s.Canopy))
+		if lost := floats.SumCompensated(flows); math.Abs(lost) > 1e-6 {
+			t.Fatalf("%v mm lost", lost)
 		}
 	})
 }
@@ -236,9 +244,9 @@ func TestMoreRainNeverRaisesALaterDeficit(t *testing.T) {
 	for k, name := range map[kind]string{onlyModelled: "modelled", onlyGiven: "given", both: "both"} {
 		t.Run(name, rapid.MakeCheck(func(t *rapid.T) {
 			p, days := drawParams(t), drawDays(t, k, 120)
-			start := Store{Deficit: mm(rapid.Float64Range(0, 300).Draw(t, "deficit"))}
+			start := Store{Deficit: mm(draw(t, 0, 300, "deficit"))}
 			wetter := append([]Input(nil), days...)
-			wetter[rapid.IntRange(0, len(days)-1).Draw(t, "when")].Rain += mm(rapid.Float64Range(0, 60).Draw(t, "more"))
+			wetter[rapid.IntRange(0, len(days)-1).Draw(t, "when")].Rain += mm(draw(t, 0, 60, "more"))
 			a, b := run(start, days, p), run(start, wetter, p)
 			for i := range a {
 				if b[i] > a[i]+1e-9 {
@@ -253,7 +261,7 @@ func TestMoreGivenUseNeverLowersALaterDeficit(t *testing.T) {
 	rapid.Check(t, func(t *rapid.T) {
 		p, days := drawParams(t), drawDays(t, onlyGiven, 120)
 		thirstier := append([]Input(nil), days...)
-		thirstier[rapid.IntRange(0, len(days)-1).Draw(t, "when")].GivenET += mm(rapid.Float64Range(0, 5).Draw(t, "more"))
+		thirstier[rapid.IntRange(0, len(days)-1).Draw(t, "when")].GivenET += mm(draw(t, 0, 5, "more"))
 		a, b := run(Store{}, days, p), run(Store{}, thirstier, p)
 		for i := range a {
 			if b[i] < a[i]-1e-9 {
@@ -267,8 +275,8 @@ func TestMoreGivenUseNeverLowersALaterDeficit(t *testing.T) {
 func TestDifferentStartsConverge(t *testing.T) {
 	rapid.Check(t, func(t *rapid.T) {
 		p, days := drawParams(t), drawDays(t, both, 200)
-		a := Store{Deficit: mm(rapid.Float64Range(0, 300).Draw(t, "one"))}
-		b := Store{Deficit: mm(rapid.Float64Range(0, 300).Draw(t, "other"))}
+		a := Store{Deficit: mm(draw(t, 0, 300, "one"))}
+		b := Store{Deficit: mm(draw(t, 0, 300, "other"))}
 		apart := math.Abs(float64(a.Deficit - b.Deficit))
 		for i, in := range days {
 			a.Day(in, p)
@@ -292,7 +300,7 @@ func TestScaling(t *testing.T) {
 		for i, in := range days {
 			doubled[i] = Input{Rain: 2 * in.Rain, ReferenceET: 2 * in.ReferenceET, Coefficient: in.Coefficient, GivenET: 2 * in.GivenET}
 		}
-		start := mm(rapid.Float64Range(0, 300).Draw(t, "deficit"))
+		start := mm(draw(t, 0, 300, "deficit"))
 		a, b := run(Store{Deficit: start}, days, p), run(Store{Deficit: 2 * start}, doubled, twice)
 		for i := range a {
 			if b[i] != 2*a[i] {

@@ -252,6 +252,9 @@ func OpenOrAttach(ctx context.Context, o Options) (*Broker, error) {
 	}
 }
 
+// Attached tells whether another process owns the store: a running daemon.
+func (b *Broker) Attached() bool { return b.lock == nil }
+
 // URL is where the broker can be reached, empty when only inside this process.
 func (b *Broker) URL() string { return withoutPassword(b.url) }
 

@@ -11,26 +11,31 @@ import (
 // server's file store (8 MiB each). Common practice of the trade, no source.
 const leastStore = 64 * mib
 
+const roomOp = "looking for room on the disk"
+
 // roomFor caps a wished store size below what the disk can hold: what the
 // store has already plus what is free, less a tenth for indexes, compaction
 // and batches on their way. A full disk wedges JetStream until the process
 // restarts; a full store is answered at once and heals by itself.
 func roomFor(dir string, wished int64) (int64, error) {
-	const op = "looking for room on the disk"
 	free, known, err := freeDisk(dir)
 	if err != nil {
-		return 0, folderError(op, dir, err)
+		return 0, folderError(roomOp, dir, err)
 	}
 	if !known {
 		return wished, nil
 	}
 	used, err := sizeOf(dir)
 	if err != nil {
-		return 0, folderError(op, dir, err)
+		return 0, folderError(roomOp, dir, err)
 	}
+	return capped(dir, free, used, wished)
+}
+
+func capped(dir string, free, used, wished int64) (int64, error) {
 	room := (free + used) / 10 * 9
 	if room < leastStore || free < leastStore/8 {
-		return 0, &Error{Code: Full, Op: op,
+		return 0, &Error{Code: Full, Op: roomOp,
 			Err:  fmt.Errorf("the disk of %s has %d MiB free and the store holds %d MiB: expected at least %d MiB in all and one eighth of that free", dir, free/mib, used/mib, int64(leastStore/mib)),
 			Hint: "free some space or move the data folder"}
 	}

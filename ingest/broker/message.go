@@ -72,8 +72,8 @@ func (b *Broker) Publish(ctx context.Context, subject string, header map[string]
 
 // PublishExpect stores a message only if the newest message of its subject
 // has sequence expected (0: there is none), else code Moved: read again and
-// decide again. A message whose id was stored a moment ago is not stored
-// twice; its sequence is returned.
+// decide again. If that newest message is this very one, by its id, because
+// an earlier call's answer was lost, its sequence is returned and no error.
 func (b *Broker) PublishExpect(ctx context.Context, subject string, data []byte, msgID string, expected uint64) (seq uint64, err error) {
 	op := "publishing to " + subject
 	m, err := message(op, subject, nil, data)
@@ -85,10 +85,20 @@ func (b *Broker) PublishExpect(ctx context.Context, subject string, data []byte,
 		options = append(options, jetstream.WithMsgID(msgID))
 	}
 	ack, err := b.js.PublishMsg(ctx, m, options...)
-	if err != nil {
-		return 0, b.wrap(op, err)
+	if err == nil {
+		return ack.Sequence, nil
 	}
-	return ack.Sequence, nil
+	err = b.wrap(op, err)
+	// The server looks at the sequence before the id.
+	if errors.Is(err, ErrMoved) && msgID != "" {
+		if stream, e := b.js.StreamNameBySubject(ctx, subject); e == nil {
+			last, ok, e := b.Last(ctx, stream, subject)
+			if e == nil && ok && last.Header.Get(IDHeader) == msgID {
+				return last.Seq, nil
+			}
+		}
+	}
+	return 0, err
 }
 
 // Last returns the newest message of a subject (which may hold wildcards), and

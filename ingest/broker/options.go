@@ -17,8 +17,9 @@ const (
 	// Strict syncs before every acknowledgement: nothing acknowledged is lost
 	// in a power cut. The default.
 	Strict Durability = iota
-	// Relaxed syncs once a second: a power cut may lose the last second; a
-	// killed process loses nothing. For disks that sync slowly.
+	// Relaxed syncs once a second: a power cut may lose the last second, also
+	// the one before a stop; a killed process loses nothing. For disks that
+	// sync slowly.
 	Relaxed
 )
 

@@ -12,8 +12,8 @@ import (
 var knownLabels = []string{"bn", "bt", "bu", "bv", "bs", "bver", "n", "u", "v", "vs", "vb", "vd", "s", "t", "ut"}
 
 // Versions of SenML that are understood: up to 10, RFC 8428 section 4.4, and
-// 26, which is 10 with the feature "secondary units" (RFC 9100 section 3:
-// 10 + 2^4; from memory), which quantity knows.
+// 26, which is 10 with the feature "secondary units", 10 + 2^4 (RFC 9100
+// section 4; Bormann 2021). Secondary units are taken in any version.
 const (
 	rfcVersion            = 10
 	secondaryUnitsVersion = 26

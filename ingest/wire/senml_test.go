@@ -5,6 +5,7 @@ import (
 	"errors"
 	"fmt"
 	"math"
+	"runtime"
 	"slices"
 	"strings"
 	"testing"
@@ -170,13 +171,15 @@ func TestHostilePacks(t *testing.T) {
 // A pack too large is refused before anything is made of it.
 func TestTooLargeCostsNothing(t *testing.T) {
 	big := []byte(`[{"n":"x","vs":"` + strings.Repeat("y", 8<<20) + `"}]`)
-	r := testing.Benchmark(func(b *testing.B) {
-		for b.Loop() {
-			DecodeSenML(big, gauge)
-		}
-	})
-	if r.AllocedBytesPerOp() > 4096 {
-		t.Errorf("%d bytes are allocated to refuse %d", r.AllocedBytesPerOp(), len(big))
+	var before, after runtime.MemStats
+	runtime.ReadMemStats(&before)
+	_, problems := DecodeSenML(big, gauge)
+	runtime.ReadMemStats(&after)
+	if len(problems) != 1 || problems[0].Code != TooLarge {
+		t.Errorf("%d bytes: %v, want code %s", len(big), problems, TooLarge)
+	}
+	if spent := after.TotalAlloc - before.TotalAlloc; spent > MaxSenML {
+		t.Errorf("%d bytes are allocated to refuse %d", spent, len(big))
 	}
 }
 

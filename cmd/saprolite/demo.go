@@ -1,0 +1,323 @@
+package main
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"io"
+	"os"
+	"path/filepath"
+	"sync"
+	"time"
+
+	"github.com/rs/zerolog"
+	"github.com/spf13/cobra"
+
+	"saprolite/alerts"
+	"saprolite/cmd/saprolite/demo"
+	"saprolite/cmd/saprolite/engine"
+	"saprolite/ingest/broker"
+	"saprolite/ingest/quantity"
+	"saprolite/ingest/wire"
+)
+
+func newDemo() *cobra.Command {
+	var fast bool
+	var dir string
+	c := &cobra.Command{
+		Use:   "demo",
+		Short: "Watch an invented forest live through a failed wet season",
+		Long: `Starts the daemon with its broker inside on an invented forest of twelve stands
+with fifteen years of invented history. Two more years then arrive the way real
+data do, a day every fraction of a second; in the first of them the wet season
+fails. You see what is told, and find each mail as a file, the webhook's posts,
+and /metrics. Nothing leaves this machine.
+
+When the two years are over the daemon stays up to be looked at, until Ctrl-C.`,
+		Example: `  saprolite demo
+  saprolite demo --fast              run through without pauses and end
+  saprolite demo --dir corrow        keep everything in the folder corrow`,
+		Args: cobra.NoArgs,
+		RunE: func(cmd *cobra.Command, _ []string) error {
+			ctx := cmd.Context()
+			if dir == "" {
+				temp, err := os.MkdirTemp("", "saprolite-demo-")
+				if err != nil {
+					return err
+				}
+				dir = temp
+			}
+			err := runDemo(ctx, cmd.OutOrStdout(), dir, fast)
+			if ctx.Err() != nil && (err == nil || errors.Is(err, context.Canceled)) {
+				fmt.Fprintf(cmd.OutOrStdout(), "\nStopped. Everything is in %s; delete it when you like.\n", dir)
+				return nil
+			}
+			return err
+		},
+	}
+	c.Flags().BoolVar(&fast, "fast", false, "no pauses, and end after the two years")
+	c.Flags().StringVar(&dir, "dir", "", "folder for the demo's files (default: a new one for temporary files)")
+	return c
+}
+
+// A day of the demo takes this long to look at.
+const demoDay = 120 * time.Millisecond
+
+// showing is one run of the demo.
+type showing struct {
+	out    io.Writer
+	dir    string
+	fast   bool
+	daemon *daemon
+	feed   *broker.Broker // as a feed outside the daemon would use it
+	island *demo.Island
+
+	mu   sync.Mutex
+	told []alerts.Message // since they were printed
+	hook int              // posts the webhook has had
+}
+
+func runDemo(ctx context.Context, out io.Writer, dir string, fast bool) (err error) {
+	s := &showing{out: out, dir: dir, fast: fast, island: demo.NewIsland()}
+	mails := filepath.Join(dir, "mails")
+	if err := os.MkdirAll(mails, 0o755); err != nil {
+		return err
+	}
+	smtp, err := demo.ReceiveMail(mails)
+	if err != nil {
+		return err
+	}
+	defer smtp.Close()
+	hook, err := demo.ReceiveWebhook(s.posted)
+	if err != nil {
+		return err
+	}
+	defer hook.Close()
+	cfgFile := filepath.Join(dir, "saprolite.yaml")
+	err = errors.Join(
+		os.WriteFile(filepath.Join(dir, "stands.geojson"), demo.Forest, 0o644),
+		os.WriteFile(cfgFile, demo.Settings(smtp.Address(), hook.URL()), 0o644),
+	)
+	if err != nil {
+		return err
+	}
+	logFile, err := os.Create(filepath.Join(dir, "saprolite.log"))
+	if err != nil {
+		return err
+	}
+	defer logFile.Close()
+	cfg, reg, err := readBoth(cfgFile)
+	if err != nil {
+		return err
+	}
+	s.say(introduction, demo.Place, len(reg.Stands), dir)
+
+	ctx, cancel := context.WithCancel(ctx)
+	defer cancel()
+	if s.daemon, err = openDaemon(ctx, cfg, reg, zerolog.New(logFile).With().Timestamp().Logger()); err != nil {
+		return err
+	}
+	s.daemon.invented = true
+	s.daemon.onTold = s.note
+	ended := make(chan error, 1)
+	go func() { ended <- s.daemon.run(ctx) }()
+	defer func() {
+		cancel()
+		err = errors.Join(err, <-ended)
+	}()
+	if s.feed, err = broker.Attach(ctx, cfg.Data); err != nil {
+		return err
+	}
+	defer s.feed.Close(context.WithoutCancel(ctx))
+	if err := s.history(ctx); err != nil {
+		return err
+	}
+	if err := s.live(ctx); err != nil {
+		return err
+	}
+	if err := s.end(ctx); err != nil {
+		return err
+	}
+	if fast {
+		return nil
+	}
+	s.say("\nThe daemon stays up to be looked at. Ctrl-C ends it.\n")
+	<-ctx.Done()
+	return ctx.Err()
+}
+
+const introduction = `This is %s: %d stands, three rain gauges, a mast and a flux tower.
+The forest, its people and its weather are invented; nothing may be concluded from them.
+The daemon, its broker and the way of the data are the real ones.
+Files are in %s
+
+`
+
+func (s *showing) say(format string, args ...any) { fmt.Fprintf(s.out, format, args...) }
+
+// note keeps what was told for printing; it is called in the daemon's loop.
+func (s *showing) note(m alerts.Message) {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	s.told = append(s.told, m)
+}
+
+func (s *showing) posted(string) {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	s.hook++
+}
+
+func (s *showing) taken() []alerts.Message {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	told := s.told
+	s.told = nil
+	return told
+}
+
+// history loads fifteen years the way saprolite load does and lets them settle.
+func (s *showing) history(ctx context.Context) error {
+	file := filepath.Join(s.dir, "history.csv")
+	rows, err := s.writeHistory(file)
+	if err != nil {
+		return err
+	}
+	s.say("Fifteen years of history, %s to %s: %d daily values in history.csv.\n", demo.FirstPast, demo.FirstLive-1, rows)
+	began := time.Now()
+	l := &loading{reg: s.daemon.reg, to: s.feed, errs: s.out, packs: map[string]*pack{}}
+	if err := l.loadFiles(ctx, []string{file}, io.Discard); err != nil {
+		return err
+	}
+	if err := s.tick(ctx, demo.FirstLive); err != nil {
+		return err
+	}
+	s.say("Loaded and settled in %.1f s. What is known of the stores now:\n\n", time.Since(began).Seconds())
+	s.stores()
+	recorded := 0
+	for _, m := range s.taken() {
+		if !m.Told {
+			recorded++
+			continue
+		}
+		if err := sayMessage(s.out, m); err != nil {
+			return err
+		}
+	}
+	s.say("\nWhat those years would have raised is recorded (%d messages) and told to nobody.\n", recorded)
+	s.say("Now two years arrive day by day. The wet season is about to fail.\n\n")
+	return nil
+}
+
+func (s *showing) writeHistory(name string) (rows int, err error) {
+	file, err := create(name)
+	if err != nil {
+		return 0, err
+	}
+	defer file.discard()
+	csv := wire.NewCSVWriter(file)
+	for d := demo.FirstPast; d < demo.FirstLive; d++ {
+		for _, source := range s.island.Next() {
+			for _, o := range source.Observations {
+				if err := csv.Write(o); err != nil {
+					return rows, err
+				}
+				rows++
+			}
+		}
+	}
+	if err := csv.Flush(); err != nil {
+		return rows, err
+	}
+	return rows, file.commit()
+}
+
+// stores prints how full each stand's store is and how that is known.
+func (s *showing) stores() {
+	for _, l := range s.daemon.watch.levels() {
+		s.say("  %s\n", l)
+	}
+}
+
+// live lets the two years arrive.
+func (s *showing) live(ctx context.Context) error {
+	month, rain := time.Month(0), 0.0
+	for d := demo.FirstLive; d <= demo.LastLive; d++ {
+		for _, day := range s.island.Next() {
+			if err := s.publish(ctx, day); err != nil {
+				return err
+			}
+			if day.Source == "gauge-valley" {
+				rain += day.Observations[0].Value
+			}
+		}
+		if err := s.tick(ctx, d+1); err != nil {
+			return err
+		}
+		for _, m := range s.taken() {
+			if err := sayMessage(s.out, m); err != nil {
+				return err
+			}
+		}
+		if _, now, _ := (d + 1).Date(); now != month {
+			if month != 0 {
+				s.say("%s\n", s.month(d, rain))
+			}
+			month, rain = now, 0
+		}
+		if !s.fast {
+			select {
+			case <-ctx.Done():
+				return ctx.Err()
+			case <-time.After(demoDay):
+			}
+		}
+	}
+	return nil
+}
+
+// month is one line on the month that has ended.
+func (s *showing) month(d quantity.Day, rain float64) string {
+	year, m, _ := d.Date()
+	return fmt.Sprintf("%d-%02d     valley rain %4.0f mm   %s", year, m, rain, s.daemon.watch.summary())
+}
+
+// publish sends one source's day as SenML to the broker, as a station would.
+func (s *showing) publish(ctx context.Context, day demo.Day) error {
+	data, err := wire.EncodeSenML(day.Observations)
+	if err != nil {
+		return err
+	}
+	_, err = s.feed.Publish(ctx, "obs.stations."+day.Source, map[string]string{engine.ContentType: engine.TypeSenML}, data)
+	return err
+}
+
+// tick lets the morning of a day come and waits until the daemon has settled.
+func (s *showing) tick(ctx context.Context, d quantity.Day) error {
+	seq, err := s.feed.Publish(ctx, engine.TickSubject, nil, engine.EncodeTick(d.Start(demo.Offset).Add(6*time.Hour)))
+	if err != nil {
+		return err
+	}
+	return s.daemon.watch.waitFor(ctx, seq)
+}
+
+// end waits for the last messages to be delivered and says where to look.
+func (s *showing) end(ctx context.Context) error {
+	if err := s.daemon.watch.waitDelivered(ctx, 30*time.Second); err != nil {
+		return err
+	}
+	mails, err := filepath.Glob(filepath.Join(s.dir, "mails", "*.eml"))
+	if err != nil {
+		return err
+	}
+	s.mu.Lock()
+	posts := s.hook
+	s.mu.Unlock()
+	s.say("\nTwo years are over. Where to look:\n")
+	s.say("  mails      %d in %s (open one with a mail program)\n", len(mails), filepath.Join(s.dir, "mails"))
+	s.say("  webhook    %d posts were received\n", posts)
+	s.say("  metrics    http://%s/metrics\n", s.daemon.watch.address())
+	s.say("  a stand    saprolite show ashlar-ridge --config %s\n", filepath.Join(s.dir, "saprolite.yaml"))
+	s.say("  the log    %s\n", filepath.Join(s.dir, "saprolite.log"))
+	return nil
+}

@@ -63,7 +63,6 @@ const (
 	poorRain = 0.11
 	// A sensor on trees or in soil further off than this stands in another
 	// stand (common practice, no source).
-	sameStandKM = 2
 	// Complete years before a limit is estimated (methods.md section K: below
 	// five the interval is wider than the value).
 	yearsForLimit = 5
@@ -134,7 +133,7 @@ func (v viewer) rain(more func(string)) Answer {
 func (v viewer) account(more func(string)) Answer {
 	const measured = "measured evapotranspiration (a flux tower or a satellite product): water use seen, not modelled, which also makes a storage limit firmer"
 	if d, ok := v.source(quantity.ActualEvapotranspiration); ok {
-		return Answer{"account", Yes, "by measured evapotranspiration of " + v.here(d)}
+		return Answer{"account", Yes, "by measured evapotranspiration of " + d.String()}
 	}
 	defer more(measured) // after what the weather asks for
 	if d, ok := v.source(quantity.ReferenceEvapotranspiration); ok {
@@ -245,7 +244,7 @@ func (v viewer) greenness(more func(string)) Answer {
 		more("a vegetation index (evi, evi2, ndvi ...) of the stand: water use follows its canopy")
 		return Answer{"greenness", IfSent, "as evi, evi2, ndvi, ndmi, fapar or lai"}
 	}
-	return Answer{"greenness", Yes, string(q) + " of " + v.here(d)}
+	return Answer{"greenness", Yes, string(q) + " of " + d.String()}
 }
 
 func (v viewer) potential(more func(string)) Answer {
@@ -254,14 +253,5 @@ func (v viewer) potential(more func(string)) Answer {
 		more("predawn_water_potential, by pressure chamber or by a sensor in the stem: how near the trees are to damage")
 		return Answer{"water potential", IfSent, "kept; not judged in this version yet"}
 	}
-	return Answer{"water potential", Yes, string(q) + " of " + v.here(d) + ", kept; not judged in this version yet"}
-}
-
-// here names a source of what only the stand itself can show, and says so when
-// it stands elsewhere.
-func (v viewer) here(d Draw) string {
-	if d.Why == whyNear && d.DistanceKM > sameStandKM {
-		return d.String() + ": another stand's, the nearest there is; name the right source under sources if this is not meant"
-	}
-	return d.String()
+	return Answer{"water potential", Yes, string(q) + " of " + d.String() + ", kept; not judged in this version yet"}
 }

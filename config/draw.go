@@ -3,6 +3,7 @@ package config
 import (
 	"fmt"
 	"math"
+	"slices"
 
 	"saprolite/ingest/quantity"
 )
@@ -39,11 +40,21 @@ const (
 	whyNear  = "near by"
 )
 
+// weather is what neighbours share. Only of these is the nearest source taken:
+// how much a stand evaporates, how green it is and at what potential its water
+// stands are its own, and another stand's would be wrong at any distance.
+var weather = []quantity.Quantity{
+	quantity.Precipitation, quantity.AirTemperature, quantity.AirTemperatureMin, quantity.AirTemperatureMax,
+	quantity.RelativeHumidity, quantity.RelativeHumidityMin, quantity.RelativeHumidityMax, quantity.VapourPressureDeficit,
+	quantity.WindSpeed, quantity.SolarRadiation, quantity.ReferenceEvapotranspiration,
+	quantity.SnowWaterEquivalent, quantity.SnowCover,
+}
+
 // Draws says where a stand takes q from, in order of preference. A list in the
 // stand's `sources` is taken exactly as written. Otherwise the stand's own id
-// comes first, then up to three positioned sources within 100 km that list q
-// among their quantities, by distance plus 8.3 km for each 100 m of height
-// between them and the stand (where both heights are known).
+// comes first, then, for weather, up to three positioned sources within 100 km
+// that list q among their quantities, by distance plus 8.3 km for each 100 m of
+// height between them and the stand (where both heights are known).
 func (r *Register) Draws(stand *Stand, q quantity.Quantity) []Draw {
 	ids, named := stand.Sources[q]
 	if !named {
@@ -126,6 +137,9 @@ func (r *Register) indexNearby() {
 	for _, s := range r.Positioned {
 		d := directionOf(float64(s.Latitude), float64(s.Longitude))
 		for _, q := range s.Quantities {
+			if !slices.Contains(weather, q.Base()) {
+				continue
+			}
 			r.nearby[q.Base()] = append(r.nearby[q.Base()], candidate{s.ID, q, d, float64(s.Elevation)})
 		}
 	}

@@ -151,19 +151,21 @@ func (s *Stand) storeLow(e *Episode) finding.Finding {
 	a := &s.Today
 	left := s.Left()
 	threshold := s.opts.StoreLow.Left[e.Level.Rank()-1]
-	passed := ""
-	if a.Basis.Measured && a.Deficit >= s.limit.Value {
-		passed = " The deficit by measured evapotranspiration has passed the storage limit."
+	headline := fmt.Sprintf("Store %s: %s used of the %s it can give, %s left.", e.Level, round(a.Deficit), round(s.limit.Value), percent(left))
+	reason := fmt.Sprintf("At this level since %s, drawn down since %s. %s", e.Since, e.Onset, s.why(e.Unusual))
+	if e.Worst.Rank() > e.Level.Rank() {
+		headline = fmt.Sprintf("Store recovering from %s: %s used of the %s it can give, %s left.", e.Worst, round(a.Deficit), round(s.limit.Value), percent(left))
+		reason = fmt.Sprintf("Counted as %s since %s: a level is left only after %d days well above it. Drawn down since %s.", e.Level, e.Changed, s.opts.StoreLow.LeaveDays, e.Onset)
 	}
-	anchored := ""
+	if a.Basis.Measured && a.Deficit >= s.limit.Value {
+		reason += " The deficit by measured evapotranspiration has passed the storage limit."
+	}
 	if !s.State.Anchored {
-		anchored = fmt.Sprintf(" The account began on %s as if the store were full and has not seen it full since: the true deficit can be larger.", s.first)
+		reason += fmt.Sprintf(" The account began on %s as if the store were full and has not seen it full since: the true deficit can be larger.", s.first)
 	}
 	f := finding.Finding{
 		Stand: s.opts.ID, Kind: finding.StoreLow, Level: e.Level, Onset: e.Onset, Day: a.Day, Ended: e.Ended, Changed: e.Changed,
-		Sources:  1,
-		Headline: fmt.Sprintf("Store %s: %s used of the %s it can give, %s left.", e.Level, round(a.Deficit), round(s.limit.Value), percent(left)),
-		Reason:   fmt.Sprintf("At this level since %s, in this dry spell since %s.%s %s%s", e.Since, e.Onset, passed, s.why(e.Unusual), anchored),
+		Sources: 1, Headline: headline, Reason: reason,
 		Evidence: s.Evidence(),
 		Threshold: finding.Threshold{
 			Value: (1 - threshold) * float64(s.limit.Value), Unit: "mm",

@@ -4,6 +4,8 @@ import (
 	"errors"
 	"fmt"
 	"io"
+
+	"saprolite/ingest/broker"
 )
 
 // Exit codes (design 5.9, after sysexits.h).
@@ -37,13 +39,24 @@ func exitCode(err error, errs io.Writer) int {
 		return 0
 	}
 	fmt.Fprintf(errs, "saprolite: %v\n", err)
-	var exit *exitError
-	var code interface{ ExitCode() int }
-	switch {
-	case errors.As(err, &exit):
+	if exit, ok := errors.AsType[*exitError](err); ok {
 		return exit.code
-	case errors.As(err, &code):
-		return code.ExitCode()
+	}
+	if b, ok := errors.AsType[*broker.Error](err); ok {
+		return brokerExit(b)
+	}
+	return exitBug
+}
+
+// brokerExit says whether starting again can help.
+func brokerExit(e *broker.Error) int {
+	switch e.Code {
+	case broker.InUse, broker.Full, broker.Unreachable, broker.NotFound, broker.Moved, broker.Closed, broker.NotRunning:
+		return exitTemporary
+	case broker.Refused, broker.Invalid, broker.Failed:
+		return exitConfiguration
+	case broker.TooLarge:
+		return exitData
 	}
 	return exitBug
 }

@@ -12,10 +12,15 @@ import (
 )
 
 // DailyHeader is the first line of the daily file (design 5.8). New columns
-// go at the end.
+// go at the end. A day's water closes as
+//
+//	input + interception = actual ET + overflow - change of deficit
+//
+// where interception is what the canopy evaporated, which actual ET contains.
 const DailyHeader = "stand,day,precipitation_mm,input_mm,reference_et_mm,actual_et_mm,et_basis,overflow_mm,deficit_mm,deficit_low_mm,deficit_high_mm," +
 	"limit_mm,limit_low_mm,limit_high_mm,limit_basis,fraction_used,predawn_mpa,midday_mpa,stress_integral_mpa_d,greenness," +
-	"greenness_expected,greenness_z,coupling_class,coupling_slope"
+	"greenness_expected,greenness_z,coupling_class,coupling_slope," +
+	"interception_mm"
 
 // WriteDaily writes the daily file: one row a stand and day from day from on
 // (NoDay: the account's first), as known now. Every stand is settled anew
@@ -85,5 +90,6 @@ func appendDaily(row []byte, id string, s *detectors.Stand) []byte {
 	empty(3) // water potential
 	number(float64(a.Greenness))
 	empty(4) // greenness_expected to coupling_slope
+	number(float64(a.Flux.Interception))
 	return append(row, '\n')
 }

@@ -61,8 +61,6 @@ const (
 	// A rain factor less certain than this asks for a nearer gauge: 10 km or
 	// 120 m of height (common practice, no source).
 	poorRain = 0.11
-	// A sensor on trees or in soil further off than this stands in another
-	// stand (common practice, no source).
 	// Complete years before a limit is estimated (methods.md section K: below
 	// five the interval is wider than the value).
 	yearsForLimit = 5

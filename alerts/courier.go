@@ -102,8 +102,8 @@ func NewCourier(dest Destination, source Source, books Books, opts CourierOption
 	return c, nil
 }
 
-// Status returns the state as last written to the book. It may be called from
-// any goroutine.
+// Status returns the state as of the last attempt or pause. It may be called
+// from any goroutine.
 func (c *Courier) Status() CourierStatus { return *c.status.Load() }
 
 // Run works until ctx is done, and then returns nil. Any error it returns means
@@ -172,6 +172,7 @@ func (c *Courier) work(ctx context.Context, arrivals <-chan arrival, ended <-cha
 		if c.book.full() {
 			in = nil
 		}
+		c.publish()
 		timer := time.NewTimer(min(wait, longestSleep))
 		select {
 		case a := <-in:

@@ -65,11 +65,11 @@ func TestMailScheduleGivesUpWithinFiveDays(t *testing.T) {
 
 func TestLaterRevisionReplacesWaitingOne(t *testing.T) {
 	synctest.Test(t, func(t *testing.T) {
-		o := newOffice(t, CourierOptions{Schedule: exact(WebhookSchedule())},
-			message("sap-a", 1, Alert), message("sap-b", 1, Alert))
+		o := newOffice(t, CourierOptions{Schedule: exact(WebhookSchedule())}, message("sap-a", 1, Alert))
 		o.door.answer = func(context.Context, Message) error { return errors.New("503") }
 		o.open()
-		time.Sleep(time.Minute) // two attempts each, the next after 5 minutes
+		time.Sleep(time.Minute) // two attempts, the next after 5 minutes
+		o.source.add(message("sap-b", 1, Alert))
 		o.source.add(message("sap-a", 2, Update))
 		o.source.add(message("sap-a", 3, Cancel))
 		time.Sleep(time.Second)

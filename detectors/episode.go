@@ -19,11 +19,13 @@ type Episode struct {
 	// than Since.
 	Changed quantity.Day
 	// Unusual says why the episode is worth a message; "" while it is not.
-	// Once it is, it stays so to its end (design 5.6).
+	// Once it is, it stays so to its end (design 5.6). Noted is the day it
+	// became so.
 	Unusual Unusual
+	Noted   quantity.Day
 }
 
-var noEpisode = Episode{Onset: quantity.NoDay, Ended: quantity.NoDay, Since: quantity.NoDay, Changed: quantity.NoDay}
+var noEpisode = Episode{Onset: quantity.NoDay, Ended: quantity.NoDay, Since: quantity.NoDay, Changed: quantity.NoDay, Noted: quantity.NoDay}
 
 // Open tells whether the episode is going on.
 func (e *Episode) Open() bool { return e.Onset != quantity.NoDay && e.Ended == quantity.NoDay }
@@ -35,6 +37,7 @@ const (
 	FewYears Unusual = "few-years" // fewer than five years known: the level alone decides
 	Seldom   Unusual = "seldom"    // not reached in most of the stand's own years
 	Early    Unusual = "early"     // at least 21 days earlier than in 4 of 5 years
+	Carried  Unusual = "carried"   // the same, because it held when the hydrological year began
 	Beyond   Unusual = "beyond"    // deeper than 4 of 5 years reach at their worst
 	Always   Unusual = "always"    // a stopped source is never ordinary
 )
@@ -43,7 +46,7 @@ const (
 // since is the first day on which the level's condition held.
 func (e *Episode) at(kind finding.Kind, level finding.Level, since, d quantity.Day) {
 	if !e.Open() {
-		*e = Episode{Kind: kind, Onset: since, Ended: quantity.NoDay}
+		*e = Episode{Kind: kind, Onset: since, Ended: quantity.NoDay, Noted: quantity.NoDay}
 	}
 	if e.Level != level {
 		e.Level, e.Since, e.Changed = level, since, d
@@ -52,6 +55,20 @@ func (e *Episode) at(kind finding.Kind, level finding.Level, since, d quantity.D
 		e.Worst = level
 	}
 }
+
+// worth notes why the episode is worth a message, from day d on.
+func (e *Episode) worth(why Unusual, d quantity.Day) {
+	if why == "" {
+		return
+	}
+	if e.Unusual == "" {
+		e.Noted = d
+	}
+	e.Unusual = why
+}
+
+// decided is the day on which what a message would say was decided.
+func (e *Episode) decided() quantity.Day { return max(e.Changed, e.Noted) }
 
 // close ends a running episode on day d, the first on which it does not hold,
 // and keeps it if it was worth a message.

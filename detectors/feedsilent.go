@@ -25,7 +25,7 @@ func (s *Stand) judgeSilence(rain, air bool) {
 		level = finding.Blind
 	}
 	st.Silent.at(finding.FeedSilent, level, since, st.Day)
-	st.Silent.Unusual = Always
+	st.Silent.worth(Always, st.Day)
 }
 
 func count(missing *int16, had *bool, here bool) {
@@ -49,9 +49,9 @@ func (s *Stand) Blind() (since quantity.Day, blind bool) {
 }
 
 func (s *Stand) feedSilent(e *Episode) finding.Finding {
-	what, from := "rain", s.opts.RainFrom
+	what, from := "rain data", s.opts.RainFrom
 	if s.State.NoAir > s.State.NoRain {
-		what, from = "air data for evapotranspiration", s.opts.AirFrom
+		what, from = "data on evapotranspiration", s.opts.AirFrom
 	}
 	days := s.silentFor()
 	reason := fmt.Sprintf("Since %s nothing usable has come. The account stands still at a deficit of %s: days without data neither dry nor wet a stand, and its true deficit is less and less known.",
@@ -61,9 +61,9 @@ func (s *Stand) feedSilent(e *Episode) finding.Finding {
 	}
 	nan := math.NaN()
 	return finding.Finding{
-		Stand: s.opts.ID, Kind: finding.FeedSilent, Level: e.Level, Onset: e.Onset, Day: s.Today.Day, Ended: e.Ended, Changed: e.Changed,
+		Stand: s.opts.ID, Kind: finding.FeedSilent, Level: e.Level, Onset: e.Onset, Day: s.Today.Day, Ended: e.Ended, Changed: e.decided(),
 		Sources: 1, Direct: true,
-		Headline: fmt.Sprintf("No %s for %d days from %s.", what, days, from),
+		Headline: fmt.Sprintf("No %s for %d days. They should come from %s.", what, days, from),
 		Reason:   reason,
 		Evidence: []finding.Evidence{
 			{Name: "days without " + what, Value: float64(days), Low: nan, High: nan, Unit: "d", Source: from},

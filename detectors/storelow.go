@@ -73,9 +73,7 @@ func (s *Stand) judgeStore() {
 	}
 	st.Low.at(finding.StoreLow, levels[worst], st.Levels[worst].Since, st.Day)
 	if st.Low.Unusual == "" || st.Low.Changed == st.Day {
-		if why := s.unusual(worst); why != "" {
-			st.Low.Unusual = why
-		}
+		st.Low.worth(s.unusual(worst), st.Day)
 	}
 }
 
@@ -91,8 +89,8 @@ const (
 func (s *Stand) unusual(level int) Unusual {
 	st := &s.State
 	needed := quantity.Millimetres(1-s.opts.StoreLow.Left[level]) * s.limit.Value
-	since := int(st.Levels[level].Since - st.Year.Start)
-	if !st.Year.Whole { // the first, partial year: count from where a whole one would begin
+	since := int(st.Levels[level].Since - st.Year.Start) // negative: since before the year began
+	if !st.Year.Whole {                                  // the first, partial year: count from where a whole one would begin
 		since += daysIntoYear(st.Year.Start, s.opts.YearStart)
 	}
 	var years, reached, later, shallower int
@@ -106,7 +104,7 @@ func (s *Stand) unusual(level int) Unusual {
 		if ok {
 			reached++
 		}
-		if !ok || first >= since+earlierDays {
+		if !ok || first >= max(0, since)+earlierDays {
 			later++
 		}
 		if y.Max < s.Today.Deficit {
@@ -119,6 +117,8 @@ func (s *Stand) unusual(level int) Unusual {
 		return FewYears
 	case float64(reached) < most*n:
 		return Seldom
+	case float64(later) >= fourOfFive*n && since < 0:
+		return Carried
 	case float64(later) >= fourOfFive*n:
 		return Early
 	case float64(shallower) >= fourOfFive*n:
@@ -140,6 +140,8 @@ func (s *Stand) why(u Unusual) string {
 		return fmt.Sprintf("This level was not reached in most of the %d complete years known.", n)
 	case Early:
 		return fmt.Sprintf("This level came at least 21 days earlier than in 4 of 5 of the %d complete years known.", n)
+	case Carried:
+		return fmt.Sprintf("The store did not refill: this level already held when the hydrological year began, as in fewer than 1 of 5 of the %d complete years known.", n)
 	case Beyond:
 		return fmt.Sprintf("The deficit is deeper than 4 of 5 of the %d complete years known reached at their worst.", n)
 	}
@@ -164,7 +166,7 @@ func (s *Stand) storeLow(e *Episode) finding.Finding {
 		reason += fmt.Sprintf(" The account began on %s as if the store were full and has not seen it full since: the true deficit can be larger.", s.first)
 	}
 	f := finding.Finding{
-		Stand: s.opts.ID, Kind: finding.StoreLow, Level: e.Level, Onset: e.Onset, Day: a.Day, Ended: e.Ended, Changed: e.Changed,
+		Stand: s.opts.ID, Kind: finding.StoreLow, Level: e.Level, Onset: e.Onset, Day: a.Day, Ended: e.Ended, Changed: e.decided(),
 		Sources: 1, Headline: headline, Reason: reason,
 		Evidence: s.Evidence(),
 		Threshold: finding.Threshold{

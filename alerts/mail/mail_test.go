@@ -14,6 +14,7 @@ import (
 	"io"
 	"math/big"
 	"net"
+	"os"
 	"strings"
 	"sync"
 	"testing"
@@ -238,9 +239,16 @@ func isTemporary(t *testing.T, err error) {
 func TestSilenceAfterTheMessageIsUnknown(t *testing.T) {
 	ctx, cancel := context.WithCancel(context.Background())
 	defer cancel()
+	hungUp := make(chan bool, 1)
 	for name, end := range map[string]func(net.Conn){
 		"hangs up": func(c net.Conn) { _ = c.Close() },
-		"stalls":   func(c net.Conn) { cancel(); _, _ = io.Copy(io.Discard, c) },
+		"stalls": func(c net.Conn) {
+			cancel()
+			// 10 s is below go-mail's own limit of 15 s; it passes only when ctx does not hang up.
+			_ = c.SetReadDeadline(time.Now().Add(10 * time.Second))
+			_, err := io.Copy(io.Discard, c)
+			hungUp <- !errors.Is(err, os.ErrDeadlineExceeded)
+		},
 	} {
 		t.Run(name, func(t *testing.T) {
 			ctx := ctx
@@ -257,6 +265,9 @@ func TestSilenceAfterTheMessageIsUnknown(t *testing.T) {
 				t.Errorf("got %v, want an unknown outcome", err)
 			}
 		})
+	}
+	if !<-hungUp {
+		t.Error("the end of the context did not hang up on a relay that stalls")
 	}
 }
 

@@ -61,7 +61,7 @@ When the two years are over the daemon stays up to be looked at, until Ctrl-C.`,
 }
 
 // A day of the demo takes this long to look at.
-const demoDay = 120 * time.Millisecond
+const demoDay = 80 * time.Millisecond
 
 // showing is one run of the demo.
 type showing struct {
@@ -205,7 +205,7 @@ func (s *showing) history(ctx context.Context) error {
 		}
 	}
 	s.say("\nWhat those years would have raised is recorded (%d messages) and told to nobody.\n", recorded)
-	s.say("Now two years arrive day by day. The wet season is about to fail.\n\n")
+	s.say("Now two years arrive day by day, as SenML from the stations. The first is an\nordinary one; after it the wet season fails. A line a month, and what is told:\n\n")
 	return nil
 }
 
@@ -254,6 +254,7 @@ func (s *showing) live(ctx context.Context) error {
 		if err := s.tick(ctx, d+1); err != nil {
 			return err
 		}
+		s.happenings(d)
 		for _, m := range s.taken() {
 			if err := sayMessage(s.out, m); err != nil {
 				return err
@@ -274,6 +275,18 @@ func (s *showing) live(ctx context.Context) error {
 		}
 	}
 	return nil
+}
+
+// happenings says what goes on beside the weather.
+func (s *showing) happenings(d quantity.Day) {
+	switch d {
+	case demo.SilentFrom:
+		s.say("%s  A fox bites through the line of gauge-high. Fennow Top has no other rain gauge.\n", d)
+	case demo.SilentTo + 1:
+		s.say("%s  The line is mended.\n", d)
+	case demo.ReadOut:
+		s.say("%s  The logger is read out: %d days of rain come in late, and the account is made right.\n", d, demo.SilentTo-demo.SilentFrom+1)
+	}
 }
 
 // month is one line on the month that has ended.

@@ -49,11 +49,12 @@ func sayMessage(w io.Writer, m alerts.Message) error {
 			what = string(m.Kind) + ": withdrawn"
 		}
 	}
-	quiet := ""
+	line := fmt.Sprintf("%s  %-14s %s", m.Day, m.StandName, what)
 	if !m.Told {
-		quiet = " (recorded, nobody is told)"
+		_, err := fmt.Fprintf(w, "%s (recorded only)\n", line)
+		return err
 	}
-	_, err := fmt.Fprintf(w, "%s  %-28s %s%s\n%s\n%s\n", m.Day, m.StandName, what, quiet, wrap(m.Headline, 12), wrap(m.Reason, 12))
+	_, err := fmt.Fprintf(w, "%s\n%s\n%s\n", line, wrap(m.Headline, 12), wrap(m.Reason, 12))
 	return err
 }
 

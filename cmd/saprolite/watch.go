@@ -4,12 +4,10 @@ import (
 	"context"
 	"errors"
 	"fmt"
-	"math"
 	"net"
 	"net/http"
 	"runtime"
 	"runtime/debug"
-	"slices"
 	"strings"
 	"sync"
 	"sync/atomic"
@@ -82,22 +80,13 @@ func (w *watch) look() {
 		s.Stands[level]++
 		s.stores = append(s.stores, storeLine(v, level))
 	}
-	s.Deficit, s.Used = spread(deficits), spread(used)
+	s.Deficit, s.Used = metrics.SpreadOf(deficits), metrics.SpreadOf(used)
 	w.seen.Store(s)
 	w.lookedAt.Store(time.Now().UnixNano())
 	w.mu.Lock()
 	defer w.mu.Unlock()
 	close(w.changed)
 	w.changed = make(chan struct{})
-}
-
-func spread(list []float64) metrics.Spread {
-	if len(list) == 0 {
-		return metrics.Spread{Median: math.NaN(), Largest: math.NaN()}
-	}
-	slices.Sort(list)
-	n := len(list)
-	return metrics.Spread{Median: (list[(n-1)/2] + list[n/2]) / 2, Largest: list[n-1]}
 }
 
 // storeLine is one line on one stand's store.

@@ -69,7 +69,7 @@ type Finding struct {
 	Onset quantity.Day // first day of the episode
 	Day   quantity.Day // the day it was judged on: the last closed day, or Ended
 	Ended quantity.Day // first day it no longer holds; NoDay while it is open
-	// Changed is the day on which Level was decided.
+	// Changed is the day on which Level, or that it is worth a message, was decided.
 	Changed quantity.Day
 	// Sources is how many independent sources agree; it sets CAP's certainty,
 	// never its severity. Direct says the condition itself was seen.

@@ -7,11 +7,14 @@ import (
 )
 
 // The invented calendar: fifteen years of history, then two years that arrive
-// day by day. In the first of these the wet season fails.
+// day by day. Between these two the wet season fails.
 var (
 	FirstPast = quantity.DateOf(2040, time.January, 1)
 	FirstLive = quantity.DateOf(2055, time.January, 1)
 	LastLive  = quantity.DateOf(2056, time.December, 31)
+
+	failsFrom = quantity.DateOf(2055, time.November, 5)
+	failsTo   = quantity.DateOf(2056, time.October, 1)
 )
 
 // Offset is the island's fixed offset from UTC.

@@ -12,7 +12,8 @@ import (
 // Island makes the invented observations, day after day from FirstPast on.
 type Island struct {
 	weather *weather
-	deficit float64 // of an invented stand that drives the tower and greenness, mm
+	deficit float64                   // of an invented stand that drives the tower and greenness, mm
+	kept    []observation.Observation // in the logger while its line was down
 }
 
 // NewIsland returns the island on the eve of FirstPast.
@@ -37,10 +38,12 @@ var green = []struct {
 }{{"benna-hollow", 0.46, 0.05}, {"dunmarl", 0.52, 0.16}, {"gorse-shelf", 0.43, 0.06}}
 
 // SilentFrom and SilentTo bound the days, in the second live year, on which
-// the high gauge sends nothing: a fox has been at the cable.
+// the high gauge sends nothing: a fox has been at the cable. ReadOut is the
+// day on which somebody reads out what the logger kept.
 var (
 	SilentFrom = quantity.DateOf(2056, time.May, 3)
 	SilentTo   = quantity.DateOf(2056, time.May, 20)
+	ReadOut    = quantity.DateOf(2056, time.May, 24)
 )
 
 // Next returns what all sources report of the next day.
@@ -49,14 +52,21 @@ func (i *Island) Next() []Day {
 	on := i.weather.today
 	var out []Day
 	for k, g := range gauges {
-		if g.id == "gauge-high" && on >= SilentFrom && on <= SilentTo {
-			continue
-		}
 		rain := float64(d.rain) * g.share
 		if rain > 0 {
 			rain *= 1 + 0.08*math.Sin(float64(int(on)*(k+3)))
 		}
-		out = append(out, Day{g.id, []observation.Observation{value(g.id, quantity.Precipitation, on, round(rain, 1))}})
+		o := value(g.id, quantity.Precipitation, on, round(rain, 1))
+		if g.id == "gauge-high" && on >= SilentFrom && on <= SilentTo {
+			i.kept = append(i.kept, o)
+			continue
+		}
+		out = append(out, Day{g.id, []observation.Observation{o}})
+	}
+	if on == ReadOut {
+		for _, o := range i.kept {
+			out = append(out, Day{o.Source, []observation.Observation{o}})
+		}
 	}
 	out = append(out, Day{"mast", []observation.Observation{
 		value("mast", quantity.AirTemperatureMin, on, float64(d.low)),

@@ -34,13 +34,12 @@ type weather struct {
 }
 
 func newWeather(first quantity.Day) *weather {
-	return &weather{random: rand.New(rand.NewPCG(7, 41)), today: first - 1, season: 1}
+	return &weather{random: rand.New(rand.NewPCG(39, 41)), today: first - 1, season: 1}
 }
 
-// failed tells whether a day lies in the wet season that fails in the demo.
-func failed(d quantity.Day) bool {
-	return d >= FirstLive-31 && d < FirstLive+270
-}
+// failed tells whether a day lies in the wet season that fails in the demo:
+// the one between its two live years.
+func failed(d quantity.Day) bool { return d >= failsFrom && d < failsTo }
 
 func (w *weather) next() day {
 	w.today++
@@ -52,29 +51,29 @@ func (w *weather) next() day {
 	angle := 2 * math.Pi * (float64(w.today.YearDay()) - 20) / 365
 	winter := math.Cos(angle) // 1 in late January, -1 in late July
 
-	chance := 0.24 + 0.21*winter
+	chance := 0.26 + 0.22*winter
 	if w.wet {
 		chance = 0.45 + 0.25*winter
 	}
 	season := w.season
 	if failed(w.today) {
-		season = 0.22
+		season = 0.3
 	}
 	w.wet = r.Float64() < chance*math.Min(1, math.Sqrt(season)+0.1)
 	var d day
 	amount := r.ExpFloat64()
 	if w.wet {
-		d.rain = quantity.Millimetres(math.Round(10*(0.4+amount*(9+4*winter)*season)) / 10)
+		d.rain = quantity.Millimetres(math.Round(10*(0.4+amount*(7.5+3.5*winter)*season)) / 10)
 	}
 	w.warmth = 0.75*w.warmth + 1.6*r.NormFloat64()
 	d.sky = math.Max(0.1, math.Min(1, 0.86-0.12*winter+0.1*r.NormFloat64()))
 	if w.wet {
 		d.sky *= 0.5
 	}
-	mean := 15.5 - 7.5*math.Cos(angle-0.3) + w.warmth
-	span := 4 + 8*d.sky
+	mean := 14.5 - 5.5*math.Cos(angle-0.3) + 0.7*w.warmth
+	span := 3 + 5*d.sky
 	d.low, d.high = degrees(mean-span/2), degrees(mean+span/2)
-	d.humidity = quantity.Percent(math.Round(math.Max(25, math.Min(98, 66+14*winter-22*(d.sky-0.6)+5*r.NormFloat64()))))
+	d.humidity = quantity.Percent(math.Round(math.Max(25, math.Min(98, 74+8*winter-18*(d.sky-0.6)+5*r.NormFloat64()))))
 	d.wind = quantity.MetresPerSecond(math.Round(10*(1.5+2.2*r.ExpFloat64()*0.6)) / 10)
 	top := climate.ClearSkyRadiation(climate.ExtraterrestrialRadiation(latitude, w.today.YearDay()), mastElevation)
 	d.solar = quantity.Megajoules(math.Round(100*float64(top)*(0.25+0.75*d.sky)) / 100)

@@ -18,6 +18,7 @@ type Episode struct {
 	// Changed is the day on which Level was decided: hysteresis makes it later
 	// than Since.
 	Changed quantity.Day
+	Eased   bool // the last change was to a lesser level
 	// Unusual says why the episode is worth a message; "" while it is not.
 	// Once it is, it stays so to its end (design 5.6). Noted is the day it
 	// became so.
@@ -49,6 +50,7 @@ func (e *Episode) at(kind finding.Kind, level finding.Level, since, d quantity.D
 		*e = Episode{Kind: kind, Onset: since, Ended: quantity.NoDay, Noted: quantity.NoDay}
 	}
 	if e.Level != level {
+		e.Eased = level.Rank() < e.Level.Rank()
 		e.Level, e.Since, e.Changed = level, since, d
 	}
 	if level.Rank() > e.Worst.Rank() {

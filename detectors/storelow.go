@@ -155,9 +155,9 @@ func (s *Stand) storeLow(e *Episode) finding.Finding {
 	threshold := s.opts.StoreLow.Left[e.Level.Rank()-1]
 	headline := fmt.Sprintf("Store %s: %s used of the %s it can give, %s left.", e.Level, round(a.Deficit), round(s.limit.Value), percent(left))
 	reason := fmt.Sprintf("At this level since %s, drawn down since %s. %s", e.Since, e.Onset, s.why(e.Unusual))
-	if e.Worst.Rank() > e.Level.Rank() {
+	if e.Eased {
 		headline = fmt.Sprintf("Store recovering from %s: %s used of the %s it can give, %s left.", e.Worst, round(a.Deficit), round(s.limit.Value), percent(left))
-		reason = fmt.Sprintf("Counted as %s since %s: a level is left only after %d days well above it. Drawn down since %s.", e.Level, e.Changed, s.opts.StoreLow.LeaveDays, e.Onset)
+		reason = fmt.Sprintf("Counted as %s since %s: a level is left only after %d days well above it. Drawn down since %s. %s", e.Level, e.Changed, s.opts.StoreLow.LeaveDays, e.Onset, s.why(e.Unusual))
 	}
 	if a.Basis.Measured && a.Deficit >= s.limit.Value {
 		reason += " The deficit by measured evapotranspiration has passed the storage limit."

@@ -119,15 +119,18 @@ func (s sheet) account(reg *config.Register, stand *config.Stand, setup *engine.
 	s.line("overflow", mm(t.Flux.Overflow), "past a full store: recharge and runoff")
 
 	fmt.Fprintf(s.out, "\nThe years\n")
-	y := a.Running()
+	y, years := a.Running(), a.Years()
+	if y.Days == 0 && len(years) > 0 {
+		y = years[len(years)-1] // the year has ended with this day
+	}
 	complete := 0
-	for _, past := range a.Years() {
+	for _, past := range years {
 		if past.Complete() {
 			complete++
 		}
 	}
 	s.line("account since", a.First().String(), begun(a))
-	s.line("this year's deepest", mm(y.Max), dayOr(y.MaxDay))
+	s.line("deepest this year", mm(y.Max), dayOr(y.MaxDay))
 	s.line("complete years", fmt.Sprint(complete), "with 90 % of days known and the store seen full")
 }
 

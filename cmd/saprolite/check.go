@@ -50,7 +50,11 @@ func sayCheck(cmd *cobra.Command, cfg *config.Config, reg *config.Register) {
 	}
 	fmt.Fprintf(out, "%s and %s are right.\n", cfg.File, reg.File)
 	fmt.Fprintf(out, "  place         %s\n", cfg.Place)
-	fmt.Fprintf(out, "  stands        %d, together %.0f ha; %d with a storage limit of their own\n", len(reg.Stands), hectares, limits)
+	area := ""
+	if hectares > 0 {
+		area = fmt.Sprintf(", together %.0f ha", hectares)
+	}
+	fmt.Fprintf(out, "  stands        %d%s; %d with a storage limit of their own\n", len(reg.Stands), area, limits)
 	fmt.Fprintf(out, "  sources       %d that may speak, %d with a position\n", len(reg.SourceIDs()), len(reg.Positioned))
 	fmt.Fprintf(out, "  data          %s\n", cfg.Data)
 	if len(cfg.Destinations) == 0 {

@@ -30,7 +30,7 @@ Over a history:    saprolite hindcast --stands stands.geojson --history history.
 		return usage(cmd, err)
 	})
 	root.AddCommand(newDemo(), newInit(), newCheck(), newRun(), newLoad(), newShow(), newHindcast())
-	for _, c := range root.Commands() {
+	for _, c := range append(root.Commands(), root) {
 		wrapUsage(c)
 	}
 	return root

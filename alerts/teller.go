@@ -86,14 +86,14 @@ func (t *Teller) Tell(stand Stand, w Wanted) ([]Message, error) {
 		for try := 0; ; try++ {
 			more, err := t.tellKind(stand, kind, w)
 			added = append(added, more...)
-			if errors.Is(err, ErrMoved) && try < 3 {
-				delete(t.told, subject{stand.ID, kind})
-				continue
+			if err == nil {
+				break
 			}
-			if err != nil {
+			// Whatever went wrong, the copy may be behind the record.
+			delete(t.told, subject{stand.ID, kind})
+			if !errors.Is(err, ErrMoved) || try == 3 {
 				return added, fmt.Errorf("tell %s of stand %s: %w", kind, stand.ID, err)
 			}
-			break
 		}
 	}
 	return added, nil
@@ -109,6 +109,9 @@ func (t *Teller) tellKind(stand Stand, kind finding.Kind, w Wanted) ([]Message, 
 		}
 		t.told[key] = l
 	}
+	if w.Now.Before(l.message.Sent) {
+		return nil, nil // a time that has been told of already: ticks are taken in again after a crash
+	}
 	var added []Message
 	add := func(m Message) error {
 		place, err := t.record.Append(m, t.told[key].place)
@@ -122,23 +125,18 @@ func (t *Teller) tellKind(stand Stand, kind finding.Kind, w Wanted) ([]Message, 
 	open, isOpen := openOf(w.Open, kind)
 
 	if l.place > 0 && l.message.Open() {
-		if isOpen && open.Onset <= l.message.Day {
+		if isOpen && open.Onset <= l.message.Day && wasTold(l.message) {
 			if open.Level == l.message.Level {
 				return nil, nil
 			}
 			return added, add(t.update(stand, l.message, open, w))
 		}
-		end := t.cancel(l.message, w)
-		end.Told = true // whoever was told it began is told it ended
-		if w.Evidence != nil {
-			end.Evidence = evidence(w.Evidence())
-		}
-		if err := add(end); err != nil {
+		if err := add(t.cancel(l.message, w)); err != nil {
 			return added, err
 		}
 	}
 	for _, f := range w.Past {
-		if f.Kind != kind || !after(f.Onset, t.told[key]) {
+		if f.Kind != kind || f.Onset <= t.told[key].covered() {
 			continue
 		}
 		// Began and ended before anybody could be told: kept, not mailed.
@@ -167,8 +165,23 @@ func (p Passed) finding() finding.Finding {
 	}
 }
 
-// after tells whether an episode that began on d is not yet in the record.
-func after(d quantity.Day, l last) bool { return l.place == 0 || d > l.message.Day }
+// covered is the last day the record has spoken for: an episode that began on
+// it or before is in the record, one that began later is not. Of an episode
+// that was withdrawn nothing is left, from its own onset on.
+func (l last) covered() quantity.Day {
+	switch {
+	case l.place == 0:
+		return quantity.NoDay
+	case l.message.EndedWhy == Corrected:
+		return l.message.Onset - 1
+	}
+	return l.message.Day
+}
+
+// wasTold tells whether anybody was told of the episode of an open message:
+// what had passed before it could be told begins with an Alert that was not,
+// anything else with one that was.
+func wasTold(m Message) bool { return m.Told || m.MsgType != Alert }
 
 func openOf(list []finding.Finding, kind finding.Kind) (finding.Finding, bool) {
 	for _, f := range list {
@@ -179,14 +192,17 @@ func openOf(list []finding.Finding, kind finding.Kind) (finding.Finding, bool) {
 	return finding.Finding{}, false
 }
 
-// begin is the first message of an episode. An episode that was told before,
-// corrected, and now holds after all goes on with the next revision.
+// begin is the first message of an episode. One that was told before, ended,
+// and now holds after all goes on with the next revision: so an id never
+// comes twice.
 func (t *Teller) begin(stand Stand, f finding.Finding, w Wanted) Message {
 	m := fill(stand, f, w)
 	m.ID, m.Revision, m.MsgType, m.Told = EpisodeID(t.place, stand.ID, f.Kind, f.Onset), 1, Alert, true
 	m.Story = m.ID
-	if l := t.told[subject{stand.ID, f.Kind}]; l.message.ID == m.ID {
-		m.Revision = l.message.Revision + 1
+	if l := t.told[subject{stand.ID, f.Kind}]; l.message.ID == m.ID || f.Onset <= l.covered() {
+		before := l.message
+		m.ID, m.Revision, m.Onset, m.Story = before.ID, before.Revision+1, before.Onset, before.Story
+		m.Corrects = before.MessageID()
 	}
 	return m
 }
@@ -200,22 +216,28 @@ func (t *Teller) update(stand Stand, before Message, f finding.Finding, w Wanted
 }
 
 // cancel ends an episode: over if the account says it held and has passed,
-// corrected if later data say it did not hold.
+// corrected if later data say it did not hold. Whoever was told it began is
+// told it ended.
 func (t *Teller) cancel(before Message, w Wanted) Message {
 	m := before
 	m.Revision++
 	m.MsgType, m.Urgency = Cancel, "Past"
 	m.Sent = w.Now.UTC()
-	m.EndedWhy, m.Ended = Corrected, w.News
+	m.Told = wasTold(before)
+	if m.Told && w.Evidence != nil {
+		m.Evidence = evidence(w.Evidence())
+	}
+	m.EndedWhy, m.Ended = Corrected, max(w.News, before.Day)
 	for _, f := range w.Past {
 		if f.Kind == before.Kind && f.Onset <= before.Day && f.Ended > before.Onset {
 			m.EndedWhy, m.Ended = Over, f.Ended
 		}
 	}
 	m.Day = m.Ended
+	m.Late = m.EndedWhy == Corrected || !m.Told || m.Ended < w.News
+	m.Corrects = ""
 	if m.EndedWhy == Corrected {
 		m.Corrects = before.MessageID()
-		m.Late = true
 		m.Headline = fmt.Sprintf("Corrected: the account with the data that have come since does not show this (was: %s).", before.Level)
 		m.Reason = "Late or revised data changed the account of the days before " + m.Ended.String() + ". What was told before is withdrawn."
 		return m

@@ -91,16 +91,21 @@ var VegetationIndices = [...]quantity.Quantity{
 type ETBasis struct {
 	_ struct{} `cbor:",toarray"`
 
-	Measured  bool
-	Reference climate.Basis // when not measured
+	Measured bool
+	// Recent: nothing to make it of has come, and the stand's own mean of the
+	// last days stands in, so that rain that is known is not lost.
+	Recent    bool
+	Reference climate.Basis // otherwise
 }
 
 // String is the token of the daily file's et_basis column; "" when unknown.
 func (b ETBasis) String() string {
-	if b.Measured {
+	switch {
+	case b.Measured:
 		return "measured"
-	}
-	if b.Reference == climate.None {
+	case b.Recent:
+		return "recent"
+	case b.Reference == climate.None:
 		return ""
 	}
 	return b.Reference.String()
@@ -118,5 +123,5 @@ type Account struct {
 	Coefficient   float64 // reference x this = demand; NaN when measured
 	Deficit       quantity.Millimetres
 	Greenness     quantity.Index // last accepted, NaN: none
-	Still         bool           // rain or evapotranspiration unknown: the account stood still
+	Still         bool           // rain unknown, or nothing to make evapotranspiration of: the account stood still
 }

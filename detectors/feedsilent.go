@@ -49,15 +49,16 @@ func (s *Stand) Blind() (since quantity.Day, blind bool) {
 }
 
 func (s *Stand) feedSilent(e *Episode) finding.Finding {
+	days := s.silentFor()
 	what, from := "rain data", s.opts.RainFrom
+	meanwhile := fmt.Sprintf("The account stands still at a deficit of %s: days without rain data neither dry nor wet a stand, and its true deficit is less and less known.", round(s.Today.Deficit))
 	if s.State.NoAir > s.State.NoRain {
 		what, from = "data on evapotranspiration", s.opts.AirFrom
+		meanwhile = fmt.Sprintf("Rain is still credited; evapotranspiration is taken as the stand's own mean of the days before (%.1f mm a day), and the deficit of %s is less and less known.", s.State.Demand, round(s.Today.Deficit))
 	}
-	days := s.silentFor()
-	reason := fmt.Sprintf("Since %s nothing usable has come. The account stands still at a deficit of %s: days without data neither dry nor wet a stand, and its true deficit is less and less known.",
-		e.Onset, round(s.Today.Deficit))
-	if low := &s.State.Low; low.Open() {
-		reason += fmt.Sprintf(" The store was %s when the data stopped; that is neither confirmed nor cleared.", low.Level)
+	reason := fmt.Sprintf("Since %s none has come. %s", e.Onset, meanwhile)
+	if e.Level == finding.Blind {
+		reason += " What was told of the store before is neither confirmed nor cleared."
 	}
 	nan := math.NaN()
 	return finding.Finding{
@@ -67,7 +68,7 @@ func (s *Stand) feedSilent(e *Episode) finding.Finding {
 		Reason:   reason,
 		Evidence: []finding.Evidence{
 			{Name: "days without " + what, Value: float64(days), Low: nan, High: nan, Unit: "d", Source: from},
-			{Name: "storage deficit when it stopped", Value: float64(s.Today.Deficit), Low: nan, High: nan, Unit: "mm", Source: "water account"},
+			{Name: "storage deficit as it is kept", Value: tenth(s.Today.Deficit), Low: nan, High: nan, Unit: "mm", Source: "water account"},
 		},
 		Threshold:  finding.Threshold{Value: float64(s.opts.FeedSilent.Days), Unit: "d", Basis: "days without data before a source counts as silent (feed-silent.days)"},
 		FieldCheck: "Look at the logger's power and line, then at the gauge: blocked funnel, spider webs, full collector. Read out what the logger kept; late data are taken in and the account is made right.",

@@ -17,7 +17,9 @@ const rootsDeepen = 10
 func (s *Stand) refreshLimit() {
 	o := &s.opts
 	nan := quantity.Millimetres(math.NaN())
-	switch year := s.State.Day.Year(); {
+	// By the running hydrological year, not the day: a restore within it must
+	// find the same.
+	switch year := (s.State.Year.Start - 1).Year(); {
 	case o.extraWater():
 		s.limit = ledger.UnknownLimit("extra water is " + o.ExtraWater + "; the account is what rain alone explains")
 	case o.configuredLimit():

@@ -32,6 +32,7 @@ func New(opts Options, first quantity.Day) *Stand {
 		Day: first - 1, Low: noEpisode, Silent: noEpisode,
 		Year:      YearSoFar{Start: first, Whole: beginsYear(first, opts.YearStart), MaxDay: quantity.NoDay},
 		Greenness: quantity.Index(math.NaN()), GreennessDay: quantity.NoDay, FullGreen: quantity.Index(math.NaN()),
+		Demand: math.NaN(),
 	}
 	s.State.Green95.Init(greenFull)
 	s.Today = Account{Day: first - 1, Still: true}
@@ -76,17 +77,27 @@ func (s *Stand) Step(in *Inputs) {
 	a.ReferenceET, a.Basis.Reference = climate.Reference(&s.opts.Site, &in.Weather)
 	a.Basis.Measured = known(in.ActualET)
 	hasRain, hasET := known(in.Precipitation), a.Basis.Measured || known(a.ReferenceET)
-	a.Still = !hasRain || !hasET
+	a.Basis.Recent = !hasET && !math.IsNaN(st.Demand)
+	a.Still = !hasRain || !hasET && !a.Basis.Recent
+	if !hasRain {
+		s.miss()
+	}
 	if !a.Still {
 		input := ledger.Input{Rain: in.Precipitation, ReferenceET: a.ReferenceET, GivenET: in.ActualET}
-		if !a.Basis.Measured {
+		switch {
+		case a.Basis.Recent:
+			input.ReferenceET, input.Coefficient = quantity.Millimetres(st.Demand), 1
+		case a.Basis.Measured:
+			s.remember(float64(in.ActualET))
+		default:
 			a.Coefficient = s.opts.coefficient() * s.greenFactor()
 			input.Coefficient = a.Coefficient
+			s.remember(a.Coefficient * float64(a.ReferenceET))
 		}
 		params := ledger.Params{CanopyStore: s.opts.canopyStore(), Capacity: s.stressCapacity(), StressAt: ledger.DefaultStressAt}
 		a.Flux = st.Store.Day(input, &params)
 		if a.Flux.Overflow > 0 {
-			st.Anchored = true
+			st.Anchored, st.Unseen = true, 0
 		}
 	}
 	a.Deficit = st.Store.Deficit
@@ -102,6 +113,32 @@ func (s *Stand) Step(in *Inputs) {
 		s.closeYear(y)
 	}
 	s.past.keep(st, yearEnds)
+}
+
+// demandDays is the time constant of State.Demand, days: long enough to take
+// out single days, short enough to follow the season. Common practice of the
+// trade, no source.
+const demandDays = 10
+
+func (s *Stand) remember(demand float64) {
+	st := &s.State
+	if math.IsNaN(st.Demand) {
+		st.Demand = math.Max(0, demand)
+		return
+	}
+	st.Demand += float64((math.Max(0, demand) - st.Demand) / demandDays)
+}
+
+// miss counts a day whose rain the account does not know. After too many the
+// store must be seen full again before its deficit counts for the years.
+func (s *Stand) miss() {
+	st := &s.State
+	if st.Unseen < math.MaxInt16 {
+		st.Unseen++
+	}
+	if int(st.Unseen) > s.opts.FeedSilent.BlindDays {
+		st.Anchored = false
+	}
 }
 
 // closeYear learns what is learned once a year: the storage limit and the

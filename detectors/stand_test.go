@@ -4,6 +4,7 @@ import (
 	"bytes"
 	"math"
 	"math/rand/v2"
+	"strings"
 	"testing"
 	"time"
 
@@ -187,11 +188,55 @@ func TestMissingIsNotZero(t *testing.T) {
 	if s.Today.Deficit != before || !s.Today.Still || !math.IsNaN(float64(s.Today.Flux.ActualET)) {
 		t.Errorf("without rain data: deficit %v, was %v; still %v", s.Today.Deficit, before, s.Today.Still)
 	}
-	in = NoInputs(s.State.Day + 1)
+}
+
+// Rain that is known is not lost for want of air data: evapotranspiration is
+// the stand's own of the days before, and such days do not count as known.
+func TestEvapotranspirationMissing(t *testing.T) {
+	s := New(options(), firstDay)
+	settle(s, firstDay+99, func(d quantity.Day) Inputs { return dry(d, 4) })
+	before, known := s.Today.Deficit, s.Running().Known
+	in := NoInputs(s.State.Day + 1)
 	in.Precipitation = 30
 	s.Step(&in)
-	if s.Today.Deficit != before || !s.Today.Still {
-		t.Errorf("without evapotranspiration: deficit %v, was %v", s.Today.Deficit, before)
+	if want := before - 30 + 4; math.Abs(float64(s.Today.Deficit-want)) > 1e-9 || s.Today.Still || s.Today.Basis.String() != "recent" {
+		t.Errorf("deficit %v, want %v; still %v, basis %s", s.Today.Deficit, want, s.Today.Still, s.Today.Basis)
+	}
+	if s.Running().Known != known {
+		t.Error("the day counts as known")
+	}
+	fresh := New(options(), firstDay)
+	in = NoInputs(firstDay)
+	in.Precipitation = 30
+	fresh.Step(&in)
+	if !fresh.Today.Still {
+		t.Error("an account that never had air data moves")
+	}
+}
+
+// After a long gap in the rain the deficit is a guess until the store has
+// been seen full: the year's maximum does not count, and messages say so.
+func TestLongGapUnanchors(t *testing.T) {
+	opts := options()
+	opts.StorageLimit = 100
+	s := New(opts, firstDay)
+	settle(s, firstDay+5, func(d quantity.Day) Inputs { return wet(d, 9, 1) })
+	settle(s, firstDay+40, func(d quantity.Day) Inputs {
+		in := NoInputs(d)
+		in.Weather.Given = 3
+		return in
+	})
+	settle(s, firstDay+90, func(d quantity.Day) Inputs { return dry(d, 3) })
+	f := s.Findings()
+	if s.State.Anchored || s.State.Unseen != 35 || len(f) != 1 || !strings.Contains(f[0].Reason, "Rain data of 35 days are missing") {
+		t.Fatalf("anchored %v, missed %d days, findings %+v", s.State.Anchored, s.State.Unseen, f)
+	}
+	if s.Running().Anchored {
+		t.Error("a maximum of a guessed deficit counts")
+	}
+	settle(s, firstDay+100, func(d quantity.Day) Inputs { return wet(d, 60, 1) })
+	if !s.State.Anchored || s.State.Unseen != 0 {
+		t.Errorf("after refilling: anchored %v, missed %d days", s.State.Anchored, s.State.Unseen)
 	}
 }
 
@@ -380,7 +425,7 @@ func TestLimit(t *testing.T) {
 		basis  string
 	}{
 		{"too few years", func(*Options) {}, 4, false, "unknown: 4 complete years of annual maxima, needs 5"},
-		{"enough years", func(*Options) {}, 5, true, "largest deficit of 20 years, from the maxima of 5 complete years, measured evapotranspiration"},
+		{"enough years", func(*Options) {}, 5, true, "once-in-20-years deficit from 5 complete years, measured evapotranspiration"},
 		{"configured", func(o *Options) { o.StorageLimit = 90 }, 5, true, "configured"},
 		{"extra water", func(o *Options) { o.StorageLimit, o.ExtraWater = 90, "known" }, 5, false, "unknown: extra water is known; the account is what rain alone explains"},
 		{"young", func(o *Options) { o.Established = 2028 }, 6, false, "unknown: roots still deepening, planted 2028"},
@@ -434,6 +479,9 @@ func BenchmarkStep(b *testing.B) {
 	}
 	b.ReportAllocs()
 	for i := 0; b.Loop(); i++ {
+		if i%(20*365) == 0 {
+			s = New(options(), firstDay) // a stand with up to 20 years behind it
+		}
 		in := &days[i%365]
 		in.Weather.Day = s.State.Day + 1
 		s.Step(in)

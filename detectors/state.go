@@ -20,7 +20,11 @@ type State struct {
 
 	Day      quantity.Day // last settled day
 	Store    ledger.Store
-	Anchored bool      // the store has been seen full
+	Anchored bool  // the store has been seen full, and the account has missed little since
+	Unseen   int16 // days of rain the account has missed since then
+	// Demand is the mean of the last days' measured evapotranspiration, or of
+	// coefficient x reference, mm a day; NaN before there is any.
+	Demand   float64
 	Year     YearSoFar // without its peaks: these only grow within a year, so one copy serves all checkpoints
 	Years    int       // closed years so far
 	Episodes int       // closed episodes so far

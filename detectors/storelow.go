@@ -5,6 +5,7 @@ import (
 	"math"
 
 	"saprolite/detectors/finding"
+	"saprolite/detectors/ledger"
 	"saprolite/ingest/quantity"
 )
 
@@ -53,10 +54,11 @@ func chanceBelow(threshold, left float64) float64 {
 var levels = [4]finding.Level{finding.DrawingDown, finding.Low, finding.NearlySpent, finding.Spent}
 
 // judgeStore decides on store-low for the day just settled. A day on which
-// the account stood still decides nothing: what held goes on holding.
+// the account stood still, or went on without data for too long, decides
+// nothing: what held goes on holding.
 func (s *Stand) judgeStore() {
 	st, set := &s.State, &s.opts.StoreLow
-	if s.Today.Still || !s.limit.Known() {
+	if _, blind := s.Blind(); blind || s.Today.Still || !s.limit.Known() {
 		return
 	}
 	left := s.Left()
@@ -88,7 +90,7 @@ const (
 // comes in most years and not early (design 5.6).
 func (s *Stand) unusual(level int) Unusual {
 	st := &s.State
-	needed := quantity.Millimetres(1-s.opts.StoreLow.Left[level]) * s.limit.Value
+	needed := s.depth(levels[level])
 	since := int(st.Levels[level].Since - st.Year.Start) // negative: since before the year began
 	if !st.Year.Whole {                                  // the first, partial year: count from where a whole one would begin
 		since += daysIntoYear(st.Year.Start, s.opts.YearStart)
@@ -130,66 +132,112 @@ func (s *Stand) unusual(level int) Unusual {
 // daysIntoYear is how many days after the hydrological year's start d lies.
 func daysIntoYear(d quantity.Day, start int) int { return (yearDay(d) - start + 365) % 365 }
 
-// why says the reason of an Unusual in a sentence.
-func (s *Stand) why(u Unusual) string {
-	n := len(s.maxima())
-	switch u {
-	case FewYears:
-		return fmt.Sprintf("Only %d complete years of this stand are known (5 are needed to tell what is usual here), so the level alone decides.", n)
-	case Seldom:
-		return fmt.Sprintf("This level was not reached in most of the %d complete years known.", n)
-	case Early:
-		return fmt.Sprintf("This level came at least 21 days earlier than in 4 of 5 of the %d complete years known.", n)
-	case Carried:
-		return fmt.Sprintf("The store did not refill: this level already held when the hydrological year began, as in fewer than 1 of 5 of the %d complete years known.", n)
-	case Beyond:
-		return fmt.Sprintf("The deficit is deeper than 4 of 5 of the %d complete years known reached at their worst.", n)
+// why says in a sentence what is unusual, with the stand's own years.
+func (s *Stand) why(e *Episode) string {
+	needed := s.depth(e.Level)
+	var n, reached, shallower int
+	earliest := math.MaxInt
+	for i := range s.years {
+		y := &s.years[i]
+		if !y.Complete() {
+			continue
+		}
+		n++
+		if first, ok := y.firstReached(needed); ok {
+			reached++
+			earliest = min(earliest, first)
+		}
+		if y.Max < s.Today.Deficit {
+			shallower++
+		}
 	}
-	return ""
+	known := fmt.Sprintf("the %d complete years known", n)
+	switch e.Unusual {
+	case FewYears:
+		return fmt.Sprintf("What is usual here is told from %d complete years on, of which there are %d; until then the level alone decides.", yearsToJudge, n)
+	case Beyond:
+		return fmt.Sprintf("The deficit is deeper than in %d of %s at their worst.", shallower, known)
+	case Carried:
+		return fmt.Sprintf("The store has not refilled since last year; of %s few began so.", known)
+	}
+	if reached == 0 {
+		return fmt.Sprintf("This level was reached in none of %s.", known)
+	}
+	start := s.State.Year.Start + quantity.Day(earliest)
+	_, month, day := start.Date()
+	return fmt.Sprintf("Of %s this level was reached in %d, at the earliest about %d %s.", known, reached, day, month)
+}
+
+// depth is the deficit at which a level begins.
+func (s *Stand) depth(l finding.Level) quantity.Millimetres {
+	return quantity.Millimetres(1-s.opts.StoreLow.Left[l.Rank()-1]) * s.limit.Value
 }
 
 // storeLow says what a store-low episode has to say today.
 func (s *Stand) storeLow(e *Episode) finding.Finding {
 	a := &s.Today
-	left := s.Left()
-	threshold := s.opts.StoreLow.Left[e.Level.Rank()-1]
-	headline := fmt.Sprintf("Store %s: %s used of the %s it can give, %s left.", e.Level, round(a.Deficit), round(s.limit.Value), percent(left))
-	reason := fmt.Sprintf("At this level since %s, drawn down since %s. %s", e.Since, e.Onset, s.why(e.Unusual))
-	if e.Eased {
-		headline = fmt.Sprintf("Store recovering from %s: %s used of the %s it can give, %s left.", e.Worst, round(a.Deficit), round(s.limit.Value), percent(left))
-		reason = fmt.Sprintf("Counted as %s since %s: a level is left only after %d days well above it. Drawn down since %s. %s", e.Level, e.Changed, s.opts.StoreLow.LeaveDays, e.Onset, s.why(e.Unusual))
+	used := fmt.Sprintf("%s used of the %s it can give, %s left.", round(a.Deficit), round(s.limit.Value), percent(s.Left()))
+	if !s.opts.configuredLimit() {
+		used = fmt.Sprintf("deficit %s, %s of the limit of %s is left.", round(a.Deficit), percent(s.Left()), round(s.limit.Value))
 	}
+	headline := fmt.Sprintf("Store %s: %s", e.Level, used)
+	reason := "At this level since " + e.Since.String()
+	if e.Onset != e.Since {
+		reason += ", and in this episode since " + e.Onset.String()
+	}
+	if e.Eased {
+		headline = fmt.Sprintf("Store back to %s: %s", e.Level, used)
+		reason = fmt.Sprintf("Was %s at its worst in this episode, which began on %s", e.Worst, e.Onset)
+	}
+	reason += ". " + s.why(e)
 	if a.Basis.Measured && a.Deficit >= s.limit.Value {
 		reason += " The deficit by measured evapotranspiration has passed the storage limit."
 	}
-	if !s.State.Anchored {
-		reason += fmt.Sprintf(" The account began on %s as if the store were full and has not seen it full since: the true deficit can be larger.", s.first)
+	if !s.opts.configuredLimit() {
+		reason += fmt.Sprintf(" The limit is the deficit to expect once in %d years: the store may hold more.", ledger.ReturnPeriod)
 	}
-	f := finding.Finding{
+	return finding.Finding{
 		Stand: s.opts.ID, Kind: finding.StoreLow, Level: e.Level, Onset: e.Onset, Day: a.Day, Ended: e.Ended, Changed: e.decided(),
-		Sources: 1, Headline: headline, Reason: reason,
+		Sources: 1, Headline: headline, Reason: reason + s.doubt(),
 		Evidence: s.Evidence(),
 		Threshold: finding.Threshold{
-			Value: (1 - threshold) * float64(s.limit.Value), Unit: "mm",
-			Basis: fmt.Sprintf("%s: less than %.0f %% of the store left; limit %s", e.Level, threshold*100, s.limit.Basis),
+			Value: tenth(s.depth(e.Level)), Unit: "mm",
+			Basis: fmt.Sprintf("%s begins with less than %.0f %% of the limit left; the limit is %s", e.Level, 100*s.opts.StoreLow.Left[e.Level.Rank()-1], s.limit.Basis),
 		},
 		FieldCheck: "Look at the crowns from a safe place: wilting or rolled leaves, early yellowing or leaf fall, thin tops. A predawn water potential of a few trees tells how near to harm they are. Compare the rain gauge with a neighbour.",
-		EndsWhen: fmt.Sprintf("Ends when more than about %.0f %% of the store has been back for %d days.",
+		EndsWhen: fmt.Sprintf("Ends when more than %.0f %% of the limit has been left for %d days in a row.",
 			100*(s.opts.StoreLow.Left[0]+0.101), s.opts.StoreLow.LeaveDays), // 0.101: chanceBelow falls under 0.2, 0.8416 x 0.12
 	}
-	return f
+}
+
+// doubt says what the account has missed, if it has.
+func (s *Stand) doubt() string {
+	switch {
+	case s.State.Unseen > 0:
+		return fmt.Sprintf(" Rain data of %d days are missing since the store was last seen full: the true deficit can be larger or smaller.", s.State.Unseen)
+	case !s.State.Anchored:
+		return fmt.Sprintf(" The account began on %s as if the store were full and has not seen it full since: the true deficit can be larger.", s.first)
+	}
+	return ""
 }
 
 // Evidence is the account's numbers of the last settled day.
 func (s *Stand) Evidence() []finding.Evidence {
 	a, nan := &s.Today, math.NaN()
-	return []finding.Evidence{
-		{Name: "storage deficit", Value: float64(a.Deficit), Low: nan, High: nan, Unit: "mm", Source: "water account, evapotranspiration " + orUnknown(a.Basis.String())},
-		{Name: "storage limit", Value: float64(s.limit.Value), Low: float64(s.limit.Low), High: float64(s.limit.High), Unit: "mm", Source: s.limit.Basis},
-		{Name: "share of store left", Value: math.Max(0, s.Left()), Low: nan, High: nan, Unit: "1", Source: "1 - deficit / limit"},
-		{Name: "rain on the day", Value: float64(a.Precipitation), Low: nan, High: nan, Unit: "mm", Source: s.opts.RainFrom},
+	list := []finding.Evidence{
+		{Name: "storage deficit", Value: tenth(a.Deficit), Low: nan, High: nan, Unit: "mm", Source: "water account, evapotranspiration " + orUnknown(a.Basis.String())},
+		{Name: "storage limit", Value: tenth(s.limit.Value), Low: tenth(s.limit.Low), High: tenth(s.limit.High), Unit: "mm", Source: s.limit.Basis},
+		{Name: "share of store left", Value: math.Round(1000*math.Max(0, s.Left())) / 1000, Low: nan, High: nan, Unit: "1", Source: "1 - deficit / limit"},
+		{Name: "rain on the day", Value: tenth(a.Precipitation), Low: nan, High: nan, Unit: "mm", Source: s.opts.RainFrom},
 	}
+	if n := s.State.Unseen; n > 0 {
+		list = append(list, finding.Evidence{Name: "days without rain data since the store was full", Value: float64(n), Low: nan, High: nan, Unit: "d", Source: s.opts.RainFrom})
+	}
+	return list
 }
+
+// tenth rounds to 0.1 mm, as a message shows it.
+func tenth(v quantity.Millimetres) float64 { return math.Round(float64(v)*10) / 10 }
 
 func round(v quantity.Millimetres) string { return fmt.Sprintf("%.0f mm", float64(v)) }
 

@@ -2,6 +2,7 @@ package detectors
 
 import (
 	"math"
+	"sort"
 
 	"saprolite/ingest/quantity"
 )
@@ -14,7 +15,7 @@ type YearSoFar struct {
 	Start    quantity.Day
 	Whole    bool  // began on the first day of a hydrological year
 	Days     int16 // days so far
-	Known    int16 // of these, days on which the account moved
+	Known    int16 // of these, days with rain and evapotranspiration
 	Measured int16 // of these, days of measured evapotranspiration
 	Max      quantity.Millimetres
 	MaxDay   quantity.Day
@@ -48,18 +49,15 @@ func (y *Year) Complete() bool {
 // the deficit can have reached d, and false if it never did. It is exact to
 // the week and never late.
 func (y *Year) firstReached(d quantity.Millimetres) (int, bool) {
-	for w, p := range y.Peaks {
-		if p != 0 && quantity.Millimetres(p)/10 >= d {
-			return w * 7, true
-		}
-	}
-	return 0, false
+	filled := y.Peaks[:min((int(y.Days)+6)/7, weeks)] // never falls within a year
+	w := sort.Search(len(filled), func(i int) bool { return quantity.Millimetres(filled[i])/10 >= d })
+	return w * 7, w < len(filled)
 }
 
 // settle takes one day of the account into the year.
 func (y *Year) settle(a *Account, anchored bool) {
 	y.Days++
-	if !a.Still {
+	if !a.Still && !a.Basis.Recent {
 		y.Known++
 		if a.Basis.Measured {
 			y.Measured++

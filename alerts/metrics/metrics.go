@@ -46,8 +46,8 @@ type Snapshot struct {
 
 	Destinations []Destination
 
-	BookSaves       uint64        // times the books were saved since the start
-	BookSaveSeconds time.Duration // all of them took together
+	BookSaves    uint64        // times the books were saved since the start
+	BookSaveTook time.Duration // all of them took together
 }
 
 // Spread is the median and the largest of one number over the stands; NaN when
@@ -196,7 +196,7 @@ func (m *Metrics) Collect(ch chan<- prometheus.Metric) {
 			counter(m.told, n, string(k))
 		}
 	}
-	ch <- prometheus.MustNewConstSummary(m.saves, s.BookSaves, s.BookSaveSeconds.Seconds(), nil)
+	ch <- prometheus.MustNewConstSummary(m.saves, s.BookSaves, s.BookSaveTook.Seconds(), nil)
 
 	for _, d := range s.Destinations {
 		gauge(m.pending, float64(d.Pending), d.Name)

@@ -38,7 +38,7 @@ func snapshot() Snapshot {
 			{Name: "office", Pending: 2, Dead: 1, OldestPending: now.Add(-90 * time.Second), LastSuccess: now.Add(-time.Minute)},
 			{Name: "new"},
 		},
-		BookSaves: 10, BookSaveSeconds: 1500 * time.Millisecond,
+		BookSaves: 10, BookSaveTook: 1500 * time.Millisecond,
 	}
 }
 

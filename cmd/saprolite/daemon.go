@@ -134,6 +134,10 @@ func (d *daemon) loop(ctx context.Context) error {
 				case d.settle <- struct{}{}:
 				default:
 				}
+			} else if d.keeper.engine.Settled() { // so that show need not wait for the next save
+				if err := d.keeper.save(keep); err != nil {
+					return err
+				}
 			}
 			quiet.Reset(settleAfter)
 		case err := <-ended:
@@ -148,7 +152,11 @@ func (d *daemon) loop(ctx context.Context) error {
 func (d *daemon) take(ctx context.Context, m broker.Msg) error {
 	told, err := d.keeper.handle(ctx, m)
 	for _, t := range told {
-		d.log.Info().Str("stand", t.Stand).Str("kind", string(t.Kind)).Str("level", string(t.Level)).
+		log := d.log.Info()
+		if !t.Told {
+			log = d.log.Debug()
+		}
+		log.Str("stand", t.Stand).Str("kind", string(t.Kind)).Str("level", string(t.Level)).
 			Str("type", string(t.MsgType)).Str("id", t.MessageID()).Bool("told", t.Told).Msg(t.Headline)
 		if d.onTold != nil {
 			d.onTold(t)

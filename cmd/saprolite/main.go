@@ -21,6 +21,7 @@ func main() {
 func saprolite(ctx context.Context, args []string, in io.Reader, out, errs io.Writer) int {
 	ctx, stop := signal.NotifyContext(ctx, os.Interrupt, syscall.SIGTERM)
 	defer stop()
+	context.AfterFunc(ctx, stop) // a second signal ends the program at once
 	root := newRoot()
 	root.SetArgs(args)
 	root.SetIn(in)

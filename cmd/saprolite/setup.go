@@ -143,7 +143,7 @@ func from(reg *config.Register, s *config.Stand, q quantity.Quantity) string {
 
 func place(s *config.Stand, d config.Draw) string {
 	if d.Source == s.ID {
-		return "the stand's own " + d.Source
+		return "the stand's own source " + d.Source
 	}
 	words := d.Source
 	if !math.IsNaN(d.DistanceKM) {

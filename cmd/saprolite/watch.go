@@ -59,7 +59,7 @@ func (w *watch) look() {
 	s := &sight{cursor: k.engine.Cursor()}
 	s.Snapshot = metrics.Snapshot{
 		Stands: map[finding.Level]int{}, Observations: c.Observations, Held: c.Held, LastTick: k.engine.Now(),
-		Told: map[finding.Kind]uint64{}, BookSaves: k.saves, BookSaveSeconds: k.saveTook,
+		Told: map[finding.Kind]uint64{}, BookSaves: k.saves, BookSaveTook: k.saveTook,
 	}
 	for kind, n := range c.Told {
 		s.Told[kind] = n

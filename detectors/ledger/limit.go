@@ -73,7 +73,7 @@ func LimitFromMaxima(maxima []float64) Limit {
 		Value: quantity.Millimetres(level),
 		Low:   quantity.Millimetres(level - z95*g.Beta),
 		High:  quantity.Millimetres(level - z05*g.Beta),
-		Basis: fmt.Sprintf("largest deficit of %d years, from the maxima of %d complete years", ReturnPeriod, n),
+		Basis: fmt.Sprintf("once-in-%d-years deficit from %d complete years", ReturnPeriod, n),
 	}
 }
 

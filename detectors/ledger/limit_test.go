@@ -39,7 +39,7 @@ func TestLimitUccle(t *testing.T) {
 	if math.Abs(float64(l.Value)-62.7026) > 5e-5 {
 		t.Errorf("20-year level %v, want 62.7026", float64(l.Value))
 	}
-	if l.Basis != "largest deficit of 20 years, from the maxima of 35 complete years" {
+	if l.Basis != "once-in-20-years deficit from 35 complete years" {
 		t.Errorf("basis %q", l.Basis)
 	}
 	if !(l.Low < l.Value && l.Value < l.High) {

@@ -202,13 +202,17 @@ func (b *Book) addToDay(d quantity.Day, q quantity.Quantity, how quantity.Fold, 
 		list = append(list, Reading{Start: from, End: to, Value: had.Value, SD: had.SD, Flag: had.Flag, Available: had.Available.UnixNano()})
 	}
 	list, written, _ := insert(list, r)
-	if !written {
+	v := fold(how, from, to, b.opts.Interval, list)
+	if !written && known && c.Flag[i]&whole == 0 && sameDay(had, v) {
 		return false, nil
 	}
-	if err := b.setReadings(d, q, list); err != nil {
-		return false, err
+	// A reading that is there while its day is not: a save broke off between
+	// the two.
+	if written {
+		if err := b.setReadings(d, q, list); err != nil {
+			return false, err
+		}
 	}
-	v := fold(how, from, to, b.opts.Interval, list)
 	return b.setDay(d, q, c, i, v, false, end, had, known), nil
 }
 
@@ -223,7 +227,15 @@ func (b *Book) setDay(d quantity.Day, q quantity.Quantity, c *column, i int, v o
 		b.head.Spans[q] = wide
 		b.dirty[b.headKey()] = struct{}{}
 	}
-	return !known || !sameFloat(had.Value, v.Value) || !sameFloat(had.SD, v.SD) || had.Flag != v.Flag
+	return !known || !sameValue(had, v)
+}
+
+func sameValue(a, b observation.DayValue) bool {
+	return sameFloat(a.Value, b.Value) && sameFloat(a.SD, b.SD) && a.Flag == b.Flag
+}
+
+func sameDay(a, b observation.DayValue) bool {
+	return sameValue(a, b) && a.Available.Equal(b.Available)
 }
 
 // Day returns the day value of q, and whether anything came for that day.
@@ -258,10 +270,15 @@ func (b *Book) Quantities() []quantity.Quantity {
 	return slices.Sorted(maps.Keys(b.head.Spans))
 }
 
-// Changed returns the parts that changed since Saved, sorted by key.
+// Changed returns the parts that changed since Saved, in the order in which
+// they must be written if not at once: head, readings, pages. If a write breaks
+// off anywhere in it, adding the same observations again mends the book: a page
+// tells of nothing that its head and readings do not have.
 func (b *Book) Changed() ([]Entry, error) {
 	entries := make([]Entry, 0, len(b.dirty))
-	for _, key := range slices.Sorted(maps.Keys(b.dirty)) {
+	keys := slices.Sorted(maps.Keys(b.dirty))
+	slices.Reverse(keys) // source before readings before page
+	for _, key := range keys {
 		data, err := b.encode(key)
 		if err != nil {
 			return nil, fmt.Errorf("daybook of %s: %s: %w", b.opts.Source, key, err)

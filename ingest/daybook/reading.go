@@ -35,8 +35,9 @@ func (r Reading) newer(s Reading) bool {
 
 func (r Reading) hash() uint64 {
 	var b [17]byte
-	binary.LittleEndian.PutUint64(b[0:], math.Float64bits(r.Value))
-	binary.LittleEndian.PutUint64(b[8:], math.Float64bits(r.SD))
+	// One pattern of bits for "unknown": a NaN that was read from a page has another.
+	binary.LittleEndian.PutUint64(b[0:], math.Float64bits(oneNaN(r.Value)))
+	binary.LittleEndian.PutUint64(b[8:], math.Float64bits(oneNaN(r.SD)))
 	b[16] = byte(r.Flag)
 	h := fnv.New64a()
 	h.Write(b[:])

@@ -31,7 +31,7 @@ func readTime(field string, b []byte) (t time.Time, isDate bool, p *Problem) {
 		t, isDate = d.Start(0), true
 	} else if err := t.UnmarshalText(b); err != nil {
 		hint := ""
-		if len(b) > dateLength && bytes.IndexByte(b[dateLength:], 'Z') < 0 && bytes.IndexAny(b[dateLength:], "+-") < 0 {
+		if len(b) > dateLength && bytes.IndexByte(b[dateLength:], 'Z') < 0 && !bytes.ContainsAny(b[dateLength:], "+-") {
 			hint = " (it names no offset from UTC)"
 		}
 		return t, false, problem(BadTime, field, "%s is neither an instant nor a date%s; write 2016-07-01T06:00:00Z, 2016-07-01T06:00:00+02:00 or 2016-07-01", brief(b), hint)

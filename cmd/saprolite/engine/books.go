@@ -201,14 +201,9 @@ func (e *Engine) Saved() {
 }
 
 // Dirty tells whether there is anything to save beside the cursor.
-func (e *Engine) Dirty() bool {
-	if len(e.unsaved) > 0 {
-		return true
-	}
-	for _, s := range e.stands {
-		if s.changed {
-			return true
-		}
-	}
-	return false
+func (e *Engine) Dirty() bool { return len(e.unsaved) > 0 || e.Settled() }
+
+// Settled tells whether stands have settled since the last save.
+func (e *Engine) Settled() bool {
+	return slices.ContainsFunc(e.stands, func(s *stand) bool { return s.changed })
 }

@@ -136,7 +136,7 @@ func (e *Engine) takeCSV(m Message, feed string, src *source, out *Outcome) erro
 			continue
 		}
 		if o.Source != src.setup.ID {
-			out.hold(feed, src.setup.ID, wire.BadSource, fmt.Sprintf("row speaks of source %q, the subject of %q", o.Source, src.setup.ID), m.Seq, describe(o))
+			out.hold(feed, src.setup.ID, wire.BadSource, fmt.Sprintf("row speaks of source %q, the subject of %q; send each source's rows under its own subject", o.Source, src.setup.ID), m.Seq, describe(o))
 			continue
 		}
 		if o.Available.IsZero() && feed != LoadFeed {

@@ -103,7 +103,7 @@ func (h *Hindcast) Run(to quantity.Day, told func(alerts.Message) error, day fun
 // allClosed tells whether day to has closed at every stand.
 func (e *Engine) allClosed(to quantity.Day) bool {
 	for _, s := range e.stands {
-		if e.lastClosed(s.setup.Offset) < to {
+		if e.lastClosed(e.now, s.setup.Offset) < to {
 			return false
 		}
 	}

@@ -19,9 +19,9 @@ type Outcome struct {
 // sent once a night has arrived (methods J.3, convention).
 const closesAfter = 6 * time.Hour
 
-// lastClosed is the last day that has closed at an offset from UTC.
-func (e *Engine) lastClosed(offset time.Duration) quantity.Day {
-	d := quantity.DayOf(e.now.Add(-closesAfter), offset) - 1
+// lastClosed is the last day that has closed by now at an offset from UTC.
+func (e *Engine) lastClosed(now time.Time, offset time.Duration) quantity.Day {
+	d := quantity.DayOf(now.Add(-closesAfter), offset) - 1
 	if e.opts.Until != quantity.NoDay {
 		d = min(d, e.opts.Until)
 	}
@@ -29,15 +29,21 @@ func (e *Engine) lastClosed(offset time.Duration) quantity.Day {
 }
 
 // Tick moves time on: days close, stands settle, and what has changed is
-// told. A tick that is not later than the last only settles what has come in.
+// told. A tick that is not later than the last only settles what has come in,
+// a second later, so that no two settlings have the same time: the teller knows
+// by it what has been told already.
 func (e *Engine) Tick(now time.Time) ([]alerts.Message, error) {
-	if now.After(e.now) {
+	before := e.now
+	switch {
+	case now.After(e.now):
 		e.now = now
+	case len(e.fresh) > 0:
+		e.now = e.now.Add(time.Second)
 	}
 	e.counts.Ticks++
 	var told []alerts.Message
 	for _, s := range e.stands {
-		more, err := e.settle(s)
+		more, err := e.settle(s, before)
 		told = append(told, more...)
 		if err != nil {
 			return told, err
@@ -45,15 +51,18 @@ func (e *Engine) Tick(now time.Time) ([]alerts.Message, error) {
 	}
 	clear(e.fresh)
 	for _, m := range told {
-		e.counts.Told[m.Kind]++
+		if m.Told {
+			e.counts.Told[m.Kind]++
+		}
 	}
 	return told, nil
 }
 
 // settle brings one stand up to the last closed day: from the nearest
-// checkpoint before the first changed day, or from where it is.
-func (e *Engine) settle(s *stand) ([]alerts.Message, error) {
-	closed := e.lastClosed(s.setup.Offset)
+// checkpoint before the first changed day, or from where it is. before is the
+// time of the tick before.
+func (e *Engine) settle(s *stand, before time.Time) ([]alerts.Message, error) {
+	closed := e.lastClosed(e.now, s.setup.Offset)
 	if s.account != nil && s.account.State.Day >= closed && len(e.fresh) == 0 {
 		return nil, nil
 	}
@@ -62,8 +71,8 @@ func (e *Engine) settle(s *stand) ([]alerts.Message, error) {
 		return nil, nil
 	}
 	news := first
-	if s.account != nil {
-		news = s.account.State.Day + 1
+	if !before.IsZero() {
+		news = max(first, e.lastClosed(before, s.setup.Offset)+1)
 	}
 	moved, err := e.settleDays(s, first, closed)
 	if err != nil || !moved {

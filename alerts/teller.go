@@ -4,6 +4,7 @@ import (
 	"errors"
 	"fmt"
 	"math"
+	"strings"
 	"time"
 
 	"saprolite/detectors/finding"
@@ -39,9 +40,15 @@ type Wanted struct {
 	News quantity.Day
 	// Now is the time of the tick that closed it.
 	Now time.Time
-	// Evidence gives the numbers of the last settled day, for the message
-	// that ends an episode. It is only called for one.
-	Evidence func() []finding.Evidence
+	// Account is asked for the numbers of the last settled day, for the
+	// message that ends an episode; nil: there are none.
+	Account Account
+}
+
+// Account is what the end of an episode tells of the stand's account.
+type Account interface {
+	Evidence() []finding.Evidence
+	Doubt() string // in a sentence, what the account has missed; "" for nothing
 }
 
 // Passed is an episode that has ended.
@@ -224,13 +231,15 @@ func (t *Teller) cancel(before Message, w Wanted) Message {
 	m.MsgType, m.Urgency = Cancel, "Past"
 	m.Sent = w.Now.UTC()
 	m.Told = wasTold(before)
-	if m.Told && w.Evidence != nil {
-		m.Evidence = evidence(w.Evidence())
+	doubt := ""
+	if m.Told && w.Account != nil {
+		m.Evidence, doubt = evidence(w.Account.Evidence()), w.Account.Doubt()
 	}
 	m.EndedWhy, m.Ended = Corrected, max(w.News, before.Day)
+	worst := before.Level
 	for _, f := range w.Past {
 		if f.Kind == before.Kind && f.Onset <= before.Day && f.Ended > before.Onset {
-			m.EndedWhy, m.Ended = Over, f.Ended
+			m.EndedWhy, m.Ended, worst = Over, f.Ended, f.Worst
 		}
 	}
 	m.Day = m.Ended
@@ -239,20 +248,25 @@ func (t *Teller) cancel(before Message, w Wanted) Message {
 	if m.EndedWhy == Corrected {
 		m.Corrects = before.MessageID()
 		m.Headline = fmt.Sprintf("Corrected: the account with the data that have come since does not show this (was: %s).", before.Level)
-		m.Reason = "Late or revised data changed the account of the days before " + m.Ended.String() + ". What was told before is withdrawn."
+		m.Reason = sentences("Late or revised data changed the account of the days before "+m.Ended.String()+". What was told before is withdrawn.", doubt)
+		m.FieldCheck, m.EndsWhen = "Nothing: what was told did not hold.", "It has ended."
 		return m
 	}
-	m.Headline = fmt.Sprintf("Over since %s (was: %s).", m.Ended, before.Level)
-	m.Reason = fmt.Sprintf("It began on %s and has ended by the rule it was told with: %s", before.Onset, lower(before.EndsWhen))
+	lasted := fmt.Sprintf("It lasted from %s to %s.", before.Onset, m.Ended-1)
+	m.EndsWhen = "It has ended."
+	switch m.Kind {
+	case finding.FeedSilent:
+		m.Headline = fmt.Sprintf("Data are coming again since %s.", m.Ended)
+		m.FieldCheck = "Whether the logger kept what was not sent: late data are taken in and the account is made right."
+	default:
+		m.Headline = fmt.Sprintf("Over since %s: enough has come back to the store (at its worst: %s).", m.Ended, worst)
+		m.FieldCheck = "What a dry spell does can show late: dead tops, thin crowns, bark beetles in the next season."
+	}
+	m.Reason = sentences(lasted, doubt)
 	return m
 }
 
-func lower(s string) string {
-	if s == "" {
-		return s
-	}
-	return string(s[0]|0x20) + s[1:]
-}
+func sentences(a, b string) string { return strings.TrimSpace(a + " " + strings.TrimSpace(b)) }
 
 // fill writes what every message of a finding says.
 func fill(stand Stand, f finding.Finding, w Wanted) Message {

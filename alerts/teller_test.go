@@ -35,12 +35,19 @@ func passed(worst finding.Level, onset, ended int) Passed {
 	return Passed{Kind: finding.StoreLow, Worst: worst, Onset: day(onset), Ended: day(ended)}
 }
 
+// books is an account whose deficit on day n is n mm.
+type books int
+
+func (b books) Evidence() []finding.Evidence {
+	return []finding.Evidence{{Name: "storage deficit", Value: float64(b), Low: math.NaN(), High: math.NaN(), Unit: "mm", Source: "water account"}}
+}
+
+func (books) Doubt() string { return "" }
+
 // closing is what is wanted by the tick that closes day n, the one before
 // having closed day n-1. What is given is what holds, or what has passed.
 func closing(n int, account ...any) Wanted {
-	w := Wanted{News: day(n), Now: day(n).End(0).Add(6 * time.Hour), Evidence: func() []finding.Evidence {
-		return []finding.Evidence{{Name: "storage deficit", Value: float64(n), Low: math.NaN(), High: math.NaN(), Unit: "mm", Source: "water account"}}
-	}}
+	w := Wanted{News: day(n), Now: day(n).End(0).Add(6 * time.Hour), Account: books(n)}
 	for _, a := range account {
 		switch a := a.(type) {
 		case finding.Finding:

@@ -137,8 +137,17 @@ func (c *checkpoints) forget(day quantity.Day) {
 func (s *Stand) Head() Head {
 	return Head{
 		Schema: Schema, First: s.first, Now: s.State, Today: s.Today, Peaks: s.peaks,
-		Years: s.years, Episodes: s.episodes, Checkpoints: s.past.all(s.State.Day),
+		Years: orNone(s.years), Episodes: orNone(s.episodes), Checkpoints: s.past.all(s.State.Day),
 	}
+}
+
+// orNone gives an empty list one form: what was taken back is written in the
+// same bytes as what never was.
+func orNone[T any](list []T) []T {
+	if len(list) == 0 {
+		return nil
+	}
+	return list
 }
 
 // Restore makes a stand from its head. A head of another schema is refused:

@@ -3,6 +3,7 @@ package detectors
 import (
 	"fmt"
 	"math"
+	"strings"
 
 	"saprolite/detectors/finding"
 	"saprolite/detectors/ledger"
@@ -198,7 +199,7 @@ func (s *Stand) storeLow(e *Episode) finding.Finding {
 	}
 	return finding.Finding{
 		Stand: s.opts.ID, Kind: finding.StoreLow, Level: e.Level, Onset: e.Onset, Day: a.Day, Ended: e.Ended, Changed: e.decided(),
-		Sources: 1, Headline: headline, Reason: reason + s.doubt(),
+		Sources: 1, Headline: headline, Reason: strings.TrimSpace(reason + " " + s.Doubt()),
 		Evidence: s.Evidence(),
 		Threshold: finding.Threshold{
 			Value: tenth(s.depth(e.Level)), Unit: "mm",
@@ -210,13 +211,13 @@ func (s *Stand) storeLow(e *Episode) finding.Finding {
 	}
 }
 
-// doubt says what the account has missed, if it has.
-func (s *Stand) doubt() string {
+// Doubt says in a sentence what the account has missed, if it has.
+func (s *Stand) Doubt() string {
 	switch {
 	case s.State.Unseen > 0:
-		return fmt.Sprintf(" Rain data of %d days are missing since the store was last seen full: the true deficit can be larger or smaller.", s.State.Unseen)
+		return fmt.Sprintf("Rain data of %d days are missing since the store was last seen full: the true deficit can be larger or smaller.", s.State.Unseen)
 	case !s.State.Anchored:
-		return fmt.Sprintf(" The account began on %s as if the store were full and has not seen it full since: the true deficit can be larger.", s.first)
+		return fmt.Sprintf("The account began on %s as if the store were full and has not seen it full since: the true deficit can be larger.", s.first)
 	}
 	return ""
 }

@@ -122,7 +122,7 @@ func (e *Engine) tell(s *stand, news quantity.Day) ([]alerts.Message, error) {
 	for _, p := range s.account.Past() {
 		e.passed = append(e.passed, alerts.Passed{Kind: p.Kind, Worst: p.Worst, Onset: p.Onset, Ended: p.Ended})
 	}
-	return e.teller.Tell(s.setup.Info, alerts.Wanted{Open: s.account.Findings(), Past: e.passed, News: news, Now: e.now, Evidence: s.account.Evidence})
+	return e.teller.Tell(s.setup.Info, alerts.Wanted{Open: s.account.Findings(), Past: e.passed, News: news, Now: e.now, Account: s.account})
 }
 
 // firstRain is the first day on which any of the stand's rain sources has

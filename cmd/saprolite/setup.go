@@ -19,7 +19,7 @@ func engineSetup(cfg *config.Config, reg *config.Register) engine.Options {
 	for _, id := range reg.SourceIDs() {
 		src := reg.Source(id)
 		opts.Sources = append(opts.Sources, engine.SourceSetup{
-			ID: id, Feed: src.Feed, Offset: src.UTCOffset, Interval: src.Interval, Ranges: ranges(cfg, id),
+			ID: id, Feed: src.Feed, Offset: src.UTCOffset, Interval: src.Interval, Unit: src.Unit, Ranges: ranges(cfg, id),
 		})
 	}
 	for i := range reg.Stands {

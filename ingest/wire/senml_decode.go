@@ -13,6 +13,7 @@ type SenMLOptions struct {
 	Source   string        // whose pack it is; not checked here
 	Received time.Time     // what relative times are relative to
 	Interval time.Duration // what a value speaks for, ending at its time; 0 is an instant
+	Unit     string        // of records that give none; "": they must
 }
 
 // DecodeSenML reads a SenML pack in JSON by design 5.4: each record's name is
@@ -63,11 +64,15 @@ func (r Record) observation(opts SenMLOptions, units map[unitOf]quantity.Convert
 	default:
 		return o, problem(NotNumber, "v", "%s is given as a text, boolean or data; send a number as \"v\"", o.Quantity)
 	}
-	key := unitOf{o.Quantity, r.Unit}
+	unit := r.Unit
+	if unit == "" {
+		unit = opts.Unit
+	}
+	key := unitOf{o.Quantity, unit}
 	conv, ok := units[key]
 	if !ok {
 		var err error
-		if conv, err = quantity.ConverterFor(o.Quantity, r.Unit); err != nil {
+		if conv, err = quantity.ConverterFor(o.Quantity, unit); err != nil {
 			return o, problem(UnknownUnit, "u", "%s", err)
 		}
 		units[key] = conv

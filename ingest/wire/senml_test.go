@@ -335,3 +335,16 @@ func BenchmarkDecodeSenML(b *testing.B) {
 	}
 	b.ReportMetric(float64(len(list))*float64(b.N)/b.Elapsed().Seconds(), "records/s")
 }
+
+// Design 5.2: a source may say the unit of values that come without one; a
+// record's own unit goes first.
+func TestUnitOfTheSource(t *testing.T) {
+	pack := []byte(`[{"bt":1320067464,"n":"precipitation","v":2},{"n":"precipitation","u":"mm","t":1,"v":3}]`)
+	list, problems := DecodeSenML(pack, SenMLOptions{Source: "gauge", Unit: "cm"})
+	if len(problems) != 0 || len(list) != 2 || list[0].Value != 20 || list[1].Value != 3 {
+		t.Errorf("%+v, %v", list, problems)
+	}
+	if _, problems := DecodeSenML(pack, SenMLOptions{Source: "gauge"}); len(problems) != 1 || problems[0].Code != UnknownUnit {
+		t.Errorf("without a unit: %v", problems)
+	}
+}

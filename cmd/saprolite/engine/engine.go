@@ -49,6 +49,7 @@ type SourceSetup struct {
 	Feed     string // "": any feed
 	Offset   time.Duration
 	Interval time.Duration
+	Unit     string // of SenML records that give none
 	// Ranges replaces the gross range of a quantity for this source.
 	Ranges map[quantity.Quantity]Range
 }

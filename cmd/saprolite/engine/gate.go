@@ -37,11 +37,12 @@ type Message struct {
 
 // Held is something that could not be used, with the reason and what to do.
 type Held struct {
-	Feed, Source string
-	Code         string
-	Reason       string
-	Seq          uint64 // of the message it came in
-	Record       string // what it was about: the record or line, as far as it could be read
+	Feed   string `json:"feed"`
+	Source string `json:"source"`
+	Code   string `json:"code"`
+	Reason string `json:"reason"`
+	Seq    uint64 `json:"message"`          // the number, in OBSERVATIONS, of the message it came in
+	Record string `json:"record,omitempty"` // what it was about: the record or line, as far as it could be read
 }
 
 // Subject is where it goes in stream HELD.
@@ -56,10 +57,12 @@ const (
 	heldNotKept      = "not-kept"
 )
 
-// aheadOfTick is how far beyond the last tick an observation may lie before
-// its clock is wrong (reliability.md case 9; methods I holds 10 minutes, ticks
-// are hourly and ours may be late).
-const aheadOfTick = 24 * time.Hour
+// ahead is how far beyond the last tick, or beyond the time at which the broker
+// took it, an observation may lie before its clock is wrong (reliability.md
+// case 9; methods I holds 10 minutes, ticks are hourly and ours may be late).
+// The broker's time counts where no tick came in between: a remote broker goes
+// on taking observations while the daemon, whose clock it is, is down.
+const ahead = 24 * time.Hour
 
 // Handle takes in one message: an observation, a pack of them, or a tick. It
 // returns what has to be held and what was told. The error is the engine's
@@ -149,7 +152,7 @@ func (e *Engine) takeCSV(m Message, feed string, src *source, out *Outcome) erro
 }
 
 func (e *Engine) takeSenML(m Message, feed string, src *source, out *Outcome) error {
-	list, problems := wire.DecodeSenML(m.Data, wire.SenMLOptions{Source: src.setup.ID, Received: m.Stored, Interval: src.setup.Interval})
+	list, problems := wire.DecodeSenML(m.Data, wire.SenMLOptions{Source: src.setup.ID, Received: m.Stored, Interval: src.setup.Interval, Unit: src.setup.Unit})
 	for _, p := range problems {
 		out.hold(feed, src.setup.ID, p.Code, p.Error(), m.Seq, string(m.Data))
 	}
@@ -172,7 +175,11 @@ func codeOf(err error) wire.Code {
 
 // keep judges one value by itself and puts it into its source's daybook.
 func (e *Engine) keep(o observation.Observation, m Message, feed string, src *source, out *Outcome) error {
-	code, reason := e.judge(o, src)
+	now := e.now
+	if !now.IsZero() && m.Stored.After(now) {
+		now = m.Stored
+	}
+	code, reason := judge(o, src, now)
 	if code != "" {
 		out.hold(feed, src.setup.ID, wire.Code(code), reason, m.Seq, describe(o))
 		return nil
@@ -186,9 +193,9 @@ func (e *Engine) keep(o observation.Observation, m Message, feed string, src *so
 	return err
 }
 
-// judge judges one value by itself: is it possible, and has its time come?
-// Judging a series is quality's matter.
-func (e *Engine) judge(o observation.Observation, src *source) (code, reason string) {
+// judge judges one value by itself: is it possible, and has its time come by
+// now (zero: not known)? Judging a series is quality's matter.
+func judge(o observation.Observation, src *source, now time.Time) (code, reason string) {
 	info, ok := o.Quantity.Info()
 	if !ok {
 		return string(wire.UnknownQuantity), fmt.Sprintf("unknown quantity %q", o.Quantity)
@@ -200,8 +207,8 @@ func (e *Engine) judge(o observation.Observation, src *source) (code, reason str
 	if o.Flag != observation.Missing && !(o.Value >= possible.Lo && o.Value <= possible.Hi) {
 		return heldOutOfRange, fmt.Sprintf("%s %.6g %s cannot be: possible is %g to %g; check unit and sign", o.Quantity, o.Value, info.Unit, possible.Lo, possible.Hi)
 	}
-	if end := o.In(src.setup.Offset).End; !e.now.IsZero() && end.After(e.now.Add(aheadOfTick)) {
-		return heldFuture, fmt.Sprintf("ends %s, more than a day ahead of the clock (%s); check the logger's clock and the year", end.UTC().Format(time.RFC3339), e.now.UTC().Format(time.RFC3339))
+	if end := o.In(src.setup.Offset).End; !now.IsZero() && end.After(now.Add(ahead)) {
+		return heldFuture, fmt.Sprintf("ends %s, more than a day ahead of the clock (%s); check the logger's clock and the year", end.UTC().Format(time.RFC3339), now.UTC().Format(time.RFC3339))
 	}
 	return "", ""
 }

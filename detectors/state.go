@@ -118,6 +118,18 @@ func (c *checkpoints) all(now quantity.Day) []State {
 	return slices.CompactFunc(list, func(a, b State) bool { return a.Day == b.Day })
 }
 
+// before returns the last checkpoint before day, nil if there is none.
+func (c *checkpoints) before(day quantity.Day) (last *State) {
+	for _, list := range [][]State{c.daily[:], c.monthly[:], c.yearly} {
+		for i := range list {
+			if d := list[i].Day; d != quantity.NoDay && d < day && (last == nil || d > last.Day) {
+				last = &list[i]
+			}
+		}
+	}
+	return last
+}
+
 // forget drops checkpoints of day and later.
 func (c *checkpoints) forget(day quantity.Day) {
 	for i := range c.daily {
@@ -177,17 +189,12 @@ func (s *Stand) Rewind(day quantity.Day) quantity.Day {
 	if day > s.State.Day {
 		return s.State.Day + 1
 	}
-	back := quantity.NoDay
-	var at State
-	for _, c := range s.past.all(day) {
-		if c.Day > back {
-			back, at = c.Day, c
-		}
-	}
-	if back == quantity.NoDay {
+	last := s.past.before(day)
+	if last == nil {
 		*s = *New(s.opts, s.first)
 		return s.first
 	}
+	at := *last
 	y := Year{YearSoFar: at.Year, Peaks: s.peaks}
 	if at.Years < len(s.years) {
 		y.Peaks = s.years[at.Years].Peaks

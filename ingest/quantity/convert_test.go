@@ -221,7 +221,7 @@ func TestSDIsADifference(t *testing.T) {
 }
 
 func FuzzNormal(f *testing.F) {
-	for _, s := range []string{"", "/", "kg/m2", "cm3/(cm2.h)", "[in_i]", "[", "]", "((", "m-", "m10", "10*-4", "µm", "a/b/c", "m--2", ")", "%vol"} {
+	for _, s := range []string{"", "/", "kg/m2", "cm3/(cm2.h)", "[in_i]", "[", "]", "((", "m-", "m10", "10*-4", "µm", "a/b/c", "m--2", ")", "%vol", "\xc2\xc2^\xb9\xc2\xc2\xe4"} {
 		f.Add(s)
 	}
 	f.Fuzz(func(t *testing.T, s string) {

@@ -5,6 +5,7 @@ import (
 	"strconv"
 	"strings"
 	"time"
+	"unicode/utf8"
 )
 
 // unit says how a value in it becomes one in the canonical unit of its group,
@@ -148,7 +149,7 @@ var signs = strings.NewReplacer(
 // factor (or bracket) after it and no more. What is no such product comes back
 // as it was.
 func normal(s string) string {
-	if len(s) > 40 { // no unit is longer
+	if len(s) > 40 || !utf8.ValidString(s) { // no unit is longer, or anything but UTF-8
 		return s
 	}
 	in := signs.Replace(s)

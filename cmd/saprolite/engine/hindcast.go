@@ -39,7 +39,7 @@ func (h *Hindcast) Add(o observation.Observation) *Held {
 		return &Held{Feed: LoadFeed, Source: o.Source, Code: heldUnregistered, Record: describe(o),
 			Reason: "no stand draws on this source and the stands file does not list it"}
 	}
-	if code, reason := h.engine.judge(o, src); code != "" {
+	if code, reason := judge(o, src, time.Time{}); code != "" {
 		return &Held{Feed: LoadFeed, Source: o.Source, Code: code, Reason: reason, Record: describe(o)}
 	}
 	at := o.Available

@@ -63,6 +63,7 @@ type Passed struct {
 // saves reading, and a record that has moved on is read again.
 type Teller struct {
 	place  string
+	status Status
 	record Record
 	told   map[subject]last
 }
@@ -77,9 +78,13 @@ type last struct {
 	place   uint64
 }
 
-// NewTeller returns a teller for a place, whose name goes into the ids.
-func NewTeller(place string, record Record) *Teller {
-	return &Teller{place: place, record: record, told: map[subject]last{}}
+// NewTeller returns a teller for a place, whose name goes into the ids; its
+// messages have the status, Actual if it is "".
+func NewTeller(place string, status Status, record Record) *Teller {
+	if status == "" {
+		status = Actual
+	}
+	return &Teller{place: place, status: status, record: record, told: map[subject]last{}}
 }
 
 // kinds is every kind a stand can be told of.
@@ -203,7 +208,7 @@ func openOf(list []finding.Finding, kind finding.Kind) (finding.Finding, bool) {
 // and now holds after all goes on with the next revision: so an id never
 // comes twice.
 func (t *Teller) begin(stand Stand, f finding.Finding, w Wanted) Message {
-	m := fill(stand, f, w)
+	m := t.fill(stand, f, w)
 	m.ID, m.Revision, m.MsgType, m.Told = EpisodeID(t.place, stand.ID, f.Kind, f.Onset), 1, Alert, true
 	m.Story = m.ID
 	if l := t.told[subject{stand.ID, f.Kind}]; l.message.ID == m.ID || f.Onset <= l.covered() {
@@ -216,7 +221,7 @@ func (t *Teller) begin(stand Stand, f finding.Finding, w Wanted) Message {
 
 // update says that the level has changed. A rise is told; a fall is recorded.
 func (t *Teller) update(stand Stand, before Message, f finding.Finding, w Wanted) Message {
-	m := fill(stand, f, w)
+	m := t.fill(stand, f, w)
 	m.ID, m.Revision, m.MsgType, m.Onset, m.Story = before.ID, before.Revision+1, Update, before.Onset, before.Story
 	m.Told = f.Level.Rank() > before.Level.Rank()
 	return m
@@ -247,8 +252,8 @@ func (t *Teller) cancel(before Message, w Wanted) Message {
 	m.Corrects = ""
 	if m.EndedWhy == Corrected {
 		m.Corrects = before.MessageID()
-		m.Headline = fmt.Sprintf("Corrected: the account with the data that have come since does not show this (was: %s).", before.Level)
-		m.Reason = sentences("Late or revised data changed the account of the days before "+m.Ended.String()+". What was told before is withdrawn.", doubt)
+		m.Headline = fmt.Sprintf("Withdrawn: by what is known now this did not hold (was: %s).", before.Level)
+		m.Reason = sentences("What is known by now of the days before "+m.Ended.String()+" (later or revised data, or changed settings) does not bear it out. What was told is withdrawn.", doubt)
 		m.FieldCheck, m.EndsWhen = "Nothing: what was told did not hold.", "It has ended."
 		return m
 	}
@@ -269,9 +274,9 @@ func (t *Teller) cancel(before Message, w Wanted) Message {
 func sentences(a, b string) string { return strings.TrimSpace(a + " " + strings.TrimSpace(b)) }
 
 // fill writes what every message of a finding says.
-func fill(stand Stand, f finding.Finding, w Wanted) Message {
+func (t *Teller) fill(stand Stand, f finding.Finding, w Wanted) Message {
 	m := Message{
-		Status: Actual, Sent: w.Now.UTC(), Late: f.Changed < w.News,
+		Status: t.status, Sent: w.Now.UTC(), Late: f.Changed < w.News,
 		Stand: stand.ID, StandName: stand.Name, Groups: stand.Groups, Hectares: Number(stand.Hectares),
 		Kind: f.Kind, Level: f.Level, Severity: severity(f.Level), Urgency: urgency(f.Level), Certainty: certainty(f),
 		Day: f.Day, Onset: f.Onset, Ended: quantity.NoDay,

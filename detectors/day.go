@@ -14,6 +14,17 @@ type Inputs struct {
 	Precipitation quantity.Millimetres
 	ActualET      quantity.Millimetres // measured, all of it
 	Greenness     quantity.Index       // seen on this day
+
+	// From says in words which source each came from, "" for none: rain,
+	// measured evapotranspiration, and what a reference is made of.
+	From From
+}
+
+// From says in words where a day's numbers came from.
+type From struct {
+	_ struct{} `cbor:",toarray"`
+
+	Rain, ET, Air string
 }
 
 // NoInputs returns a day of which nothing is known.
@@ -24,23 +35,36 @@ func NoInputs(d quantity.Day) Inputs {
 	return Inputs{Weather: w, Precipitation: quantity.Millimetres(nan), ActualET: quantity.Millimetres(nan), Greenness: quantity.Index(nan)}
 }
 
-// Set puts a day value where it belongs. It tells whether a stand has a use
-// for the quantity; v is in the canonical unit (design 5.5).
-func (in *Inputs) Set(q quantity.Quantity, v float64) bool {
+// update keeps the last source known of each.
+func (f *From) update(today *From) {
+	for _, x := range [...]struct{ last, now *string }{{&f.Rain, &today.Rain}, {&f.ET, &today.ET}, {&f.Air, &today.Air}} {
+		if *x.now != "" {
+			*x.last = *x.now
+		}
+	}
+}
+
+// Set puts a day value where it belongs and keeps in words where it came from.
+// It tells whether a stand has a use for the quantity; v is in the canonical
+// unit (design 5.5).
+func (in *Inputs) Set(q quantity.Quantity, v float64, from string) bool {
 	w := &in.Weather
 	switch q {
 	case quantity.Precipitation:
-		in.Precipitation = quantity.Millimetres(v)
+		in.Precipitation, in.From.Rain = quantity.Millimetres(v), from
 	case quantity.ActualEvapotranspiration:
-		in.ActualET = quantity.Millimetres(v)
+		in.ActualET, in.From.ET = quantity.Millimetres(v), from
 	case quantity.ReferenceEvapotranspiration:
-		w.Given = quantity.Millimetres(v)
+		w.Given, in.From.Air = quantity.Millimetres(v), from
 	case quantity.AirTemperature:
 		w.TMean = quantity.Celsius(v)
 	case quantity.AirTemperatureMin:
 		w.TMin = quantity.Celsius(v)
 	case quantity.AirTemperatureMax:
 		w.TMax = quantity.Celsius(v)
+		if math.IsNaN(float64(w.Given)) {
+			in.From.Air = from
+		}
 	case quantity.RelativeHumidity:
 		w.RHMean = quantity.Percent(v)
 	case quantity.RelativeHumidityMin:
@@ -92,9 +116,9 @@ type ETBasis struct {
 	_ struct{} `cbor:",toarray"`
 
 	Measured bool
-	// Recent: nothing to make it of has come, and the stand's own mean of the
-	// last days stands in, so that rain that is known is not lost.
-	Recent    bool
+	// Usual: nothing to make it of has come, and the stand's own mean stands
+	// in, so that rain that is known is not lost (habit).
+	Usual     bool
 	Reference climate.Basis // otherwise
 }
 
@@ -103,8 +127,8 @@ func (b ETBasis) String() string {
 	switch {
 	case b.Measured:
 		return "measured"
-	case b.Recent:
-		return "recent"
+	case b.Usual:
+		return "own-mean"
 	case b.Reference == climate.None:
 		return ""
 	}
@@ -123,5 +147,6 @@ type Account struct {
 	Coefficient   float64 // reference x this = demand; NaN when measured
 	Deficit       quantity.Millimetres
 	Greenness     quantity.Index // last accepted, NaN: none
-	Still         bool           // rain unknown, or nothing to make evapotranspiration of: the account stood still
+	From          From
+	Still         bool // rain unknown, or nothing to make evapotranspiration of: the account stood still
 }

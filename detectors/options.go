@@ -25,7 +25,8 @@ type Options struct {
 	StoreLow   StoreLow
 	FeedSilent FeedSilent
 
-	// RainFrom and AirFrom say in words where rain and air data come from.
+	// RainFrom and AirFrom say in words where rain and air data should come
+	// from, in order of preference.
 	RainFrom, AirFrom string
 }
 
@@ -43,15 +44,6 @@ type FeedSilent struct {
 	Days      int // days without a value before a source counts as silent
 	BlindDays int // days without rain data before the account cannot be judged
 }
-
-// DefaultStoreLow: the levels are design 5.6 (conventions, methods K); the
-// days are methods H.1.
-func DefaultStoreLow() StoreLow {
-	return StoreLow{Left: [4]float64{0.40, 0.25, 0.10, 0.03}, EnterDays: 3, LeaveDays: 7}
-}
-
-// DefaultFeedSilent is methods H.4.
-func DefaultFeedSilent() FeedSilent { return FeedSilent{Days: 3, BlindDays: 10} }
 
 // DefaultYearStart returns the day of the year the hydrological year begins
 // until it is found from the stand's own data (methods A.6, "regional s"): a

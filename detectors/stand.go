@@ -17,6 +17,7 @@ type Stand struct {
 	opts     Options
 	first    quantity.Day
 	limit    ledger.Limit
+	from     From          // where the last known numbers came from
 	peaks    [weeks]uint16 // of the running year
 	years    []Year        // closed
 	episodes []Episode     // closed
@@ -32,7 +33,6 @@ func New(opts Options, first quantity.Day) *Stand {
 		Day: first - 1, Low: noEpisode, Silent: noEpisode,
 		Year:      YearSoFar{Start: first, Whole: beginsYear(first, opts.YearStart), MaxDay: quantity.NoDay},
 		Greenness: quantity.Index(math.NaN()), GreennessDay: quantity.NoDay, FullGreen: quantity.Index(math.NaN()),
-		Demand: math.NaN(),
 	}
 	s.State.Green95.Init(greenFull)
 	s.Today = Account{Day: first - 1, Still: true}
@@ -71,28 +71,32 @@ func (s *Stand) Left() float64 { return 1 - float64(s.Today.Deficit/s.limit.Valu
 func (s *Stand) Step(in *Inputs) {
 	st := &s.State
 	st.Day++
-	a := Account{Day: st.Day, Precipitation: in.Precipitation, Coefficient: math.NaN(), Flux: ledger.UnknownFlux()}
+	a := Account{Day: st.Day, Precipitation: in.Precipitation, Coefficient: math.NaN(), Flux: ledger.UnknownFlux(), From: in.From}
 	s.seeGreenness(in)
 	a.Greenness = st.Greenness
 	a.ReferenceET, a.Basis.Reference = climate.Reference(&s.opts.Site, &in.Weather)
 	a.Basis.Measured = known(in.ActualET)
 	hasRain, hasET := known(in.Precipitation), a.Basis.Measured || known(a.ReferenceET)
-	a.Basis.Recent = !hasET && !math.IsNaN(st.Demand)
-	a.Still = !hasRain || !hasET && !a.Basis.Recent
+	_, month, _ := st.Day.Date()
+	usual, ok := st.Usual.of(month)
+	a.Basis.Usual = !hasET && ok
+	a.Still = !hasRain || !hasET && !a.Basis.Usual
 	if !hasRain {
 		s.miss()
 	}
 	if !a.Still {
 		input := ledger.Input{Rain: in.Precipitation, ReferenceET: a.ReferenceET, GivenET: in.ActualET}
 		switch {
-		case a.Basis.Recent:
-			input.ReferenceET, input.Coefficient = quantity.Millimetres(st.Demand), 1
+		case a.Basis.Usual && st.Usual.Measured:
+			input.GivenET = usual
+		case a.Basis.Usual:
+			input.ReferenceET, input.Coefficient = usual, 1
 		case a.Basis.Measured:
-			s.remember(float64(in.ActualET))
+			st.Usual.remember(month, in.ActualET, true)
 		default:
 			a.Coefficient = s.opts.coefficient() * s.greenFactor()
 			input.Coefficient = a.Coefficient
-			s.remember(a.Coefficient * float64(a.ReferenceET))
+			st.Usual.remember(month, quantity.Millimetres(a.Coefficient*float64(a.ReferenceET)), false)
 		}
 		params := ledger.Params{CanopyStore: s.opts.canopyStore(), Capacity: s.stressCapacity(), StressAt: ledger.DefaultStressAt}
 		a.Flux = st.Store.Day(input, &params)
@@ -102,6 +106,7 @@ func (s *Stand) Step(in *Inputs) {
 	}
 	a.Deficit = st.Store.Deficit
 	s.Today = a
+	s.from.update(&a.From)
 
 	y := s.Running()
 	y.settle(&s.Today, st.Anchored)
@@ -115,28 +120,15 @@ func (s *Stand) Step(in *Inputs) {
 	s.past.keep(st, yearEnds)
 }
 
-// demandDays is the time constant of State.Demand, days: long enough to take
-// out single days, short enough to follow the season. Common practice of the
-// trade, no source.
-const demandDays = 10
-
-func (s *Stand) remember(demand float64) {
-	st := &s.State
-	if math.IsNaN(st.Demand) {
-		st.Demand = math.Max(0, demand)
-		return
-	}
-	st.Demand += float64((math.Max(0, demand) - st.Demand) / demandDays)
-}
-
-// miss counts a day whose rain the account does not know. After too many the
-// store must be seen full again before its deficit counts for the years.
+// miss counts a day whose rain the account does not know. After too many in a
+// row the store must be seen full again before its deficit counts for the
+// years; what is missing here and there the year's completeness judges.
 func (s *Stand) miss() {
 	st := &s.State
 	if st.Unseen < math.MaxInt16 {
 		st.Unseen++
 	}
-	if int(st.Unseen) > s.opts.FeedSilent.BlindDays {
+	if int(st.NoRain)+1 > s.opts.FeedSilent.BlindDays { // NoRain counts this day later
 		st.Anchored = false
 	}
 }

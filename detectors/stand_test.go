@@ -24,7 +24,7 @@ func options() Options {
 	return Options{
 		ID: "ashlar", Site: climate.Site{Latitude: 36, Elevation: 400}, Coefficient: 1, CanopyStore: 0,
 		StorageLimit: quantity.Millimetres(nan), ExtraWater: "none", YearStart: 1,
-		StoreLow: DefaultStoreLow(), FeedSilent: DefaultFeedSilent(), RainFrom: "gauge", AirFrom: "mast",
+		StoreLow: StoreLow{Left: [4]float64{0.40, 0.25, 0.10, 0.03}, EnterDays: 3, LeaveDays: 7}, FeedSilent: FeedSilent{Days: 3, BlindDays: 10}, RainFrom: "gauge", AirFrom: "mast",
 	}
 }
 
@@ -199,11 +199,26 @@ func TestEvapotranspirationMissing(t *testing.T) {
 	in := NoInputs(s.State.Day + 1)
 	in.Precipitation = 30
 	s.Step(&in)
-	if want := before - 30 + 4; math.Abs(float64(s.Today.Deficit-want)) > 1e-9 || s.Today.Still || s.Today.Basis.String() != "recent" {
+	if want := before - 30 + 4; math.Abs(float64(s.Today.Deficit-want)) > 1e-9 || s.Today.Still || s.Today.Basis.String() != "own-mean" {
 		t.Errorf("deficit %v, want %v; still %v, basis %s", s.Today.Deficit, want, s.Today.Still, s.Today.Basis)
 	}
 	if s.Running().Known != known {
 		t.Error("the day counts as known")
+	}
+	// Measured evapotranspiration has a short store's restraint in it already.
+	opts := options()
+	opts.StorageLimit = 100
+	tower := New(opts, firstDay)
+	settle(tower, firstDay+89, func(d quantity.Day) Inputs {
+		in := wet(d, 0, 4)
+		in.ActualET = 1
+		return in
+	})
+	in = NoInputs(tower.State.Day + 1)
+	in.Precipitation = 0
+	tower.Step(&in)
+	if got := float64(tower.Today.Flux.ActualET); math.Abs(got-1) > 1e-6 {
+		t.Errorf("without the tower %g mm, want its mean of 1", got)
 	}
 	fresh := New(options(), firstDay)
 	in = NoInputs(firstDay)
@@ -211,6 +226,22 @@ func TestEvapotranspirationMissing(t *testing.T) {
 	fresh.Step(&in)
 	if !fresh.Today.Still {
 		t.Error("an account that never had air data moves")
+	}
+}
+
+// What rain is missing here and there is the year's completeness, no more
+// (methods B.1).
+func TestScatteredGapsLeaveTheYears(t *testing.T) {
+	s := New(options(), firstDay)
+	settle(s, firstDay+8*365+2, func(d quantity.Day) Inputs {
+		in := season(d, 5)
+		if d%25 == 0 {
+			in.Precipitation = quantity.Millimetres(nan)
+		}
+		return in
+	})
+	if n := len(s.maxima()); n != 8 {
+		t.Errorf("%d complete years of 8 with 8 %% of days missing", n)
 	}
 }
 

@@ -22,9 +22,7 @@ type State struct {
 	Store    ledger.Store
 	Anchored bool  // the store has been seen full, and the account has missed little since
 	Unseen   int16 // days of rain the account has missed since then
-	// Demand is the mean of the last days' measured evapotranspiration, or of
-	// coefficient x reference, mm a day; NaN before there is any.
-	Demand   float64
+	Usual    habit
 	Year     YearSoFar // without its peaks: these only grow within a year, so one copy serves all checkpoints
 	Years    int       // closed years so far
 	Episodes int       // closed episodes so far
@@ -52,6 +50,7 @@ type Head struct {
 	First       quantity.Day // the account's first day
 	Now         State
 	Today       Account // of Now.Day
+	From        From    // where the last known numbers came from
 	Peaks       [weeks]uint16
 	Years       []Year
 	Episodes    []Episode
@@ -148,7 +147,7 @@ func (c *checkpoints) forget(day quantity.Day) {
 // Head returns what must be kept to go on later as if never stopped.
 func (s *Stand) Head() Head {
 	return Head{
-		Schema: Schema, First: s.first, Now: s.State, Today: s.Today, Peaks: s.peaks,
+		Schema: Schema, First: s.first, Now: s.State, Today: s.Today, From: s.from, Peaks: s.peaks,
 		Years: orNone(s.years), Episodes: orNone(s.episodes), Checkpoints: s.past.all(s.State.Day),
 	}
 }
@@ -172,7 +171,7 @@ func Restore(opts Options, h Head) (*Stand, error) {
 		return nil, fmt.Errorf("stand %s: head is incomplete: settle again", opts.ID)
 	}
 	s := New(opts, h.First)
-	s.State, s.Today, s.peaks = h.Now, h.Today, h.Peaks
+	s.State, s.Today, s.from, s.peaks = h.Now, h.Today, h.From, h.Peaks
 	s.years, s.episodes = h.Years, h.Episodes
 	for i := range h.Checkpoints {
 		c := &h.Checkpoints[i]

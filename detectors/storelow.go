@@ -20,9 +20,12 @@ type hold struct {
 	Since   quantity.Day // first day of the run that entered it
 }
 
-// stepped moves the hysteresis by one day.
+// enter and leave are the chances of a level's condition at which it is
+// entered and left (methods H.1).
+const enter, leave = 0.5, 0.2
+
+// step moves the hysteresis by one day.
 func (h *hold) step(day quantity.Day, p float64, set *StoreLow) {
-	const enter, leave = 0.5, 0.2 // chance of the condition, methods H.1
 	switch {
 	case !h.On && p >= enter:
 		h.In++
@@ -75,7 +78,9 @@ func (s *Stand) judgeStore() {
 		return
 	}
 	st.Low.at(finding.StoreLow, levels[worst], st.Levels[worst].Since, st.Day)
-	if st.Low.Unusual == "" || st.Low.Changed == st.Day {
+	// Only while the level's own condition holds: a store that is refilling
+	// is told of no more.
+	if chanceBelow(set.Left[worst], left) >= enter && (st.Low.Unusual == "" || st.Low.Changed == st.Day) {
 		st.Low.worth(s.unusual(worst), st.Day)
 	}
 }
@@ -136,7 +141,7 @@ func daysIntoYear(d quantity.Day, start int) int { return (yearDay(d) - start + 
 // why says in a sentence what is unusual, with the stand's own years.
 func (s *Stand) why(e *Episode) string {
 	needed := s.depth(e.Level)
-	var n, reached, shallower int
+	var n, reached, shallower, began int
 	earliest := math.MaxInt
 	for i := range s.years {
 		y := &s.years[i]
@@ -147,6 +152,9 @@ func (s *Stand) why(e *Episode) string {
 		if first, ok := y.firstReached(needed); ok {
 			reached++
 			earliest = min(earliest, first)
+			if first == 0 {
+				began++
+			}
 		}
 		if y.Max < s.Today.Deficit {
 			shallower++
@@ -159,7 +167,7 @@ func (s *Stand) why(e *Episode) string {
 	case Beyond:
 		return fmt.Sprintf("The deficit is deeper than in %d of %s at their worst.", shallower, known)
 	case Carried:
-		return fmt.Sprintf("The store has not refilled since last year; of %s few began so.", known)
+		return fmt.Sprintf("The store has not refilled since the hydrological year before; of %s %d began so.", known, began)
 	}
 	if reached == 0 {
 		return fmt.Sprintf("This level was reached in none of %s.", known)
@@ -229,10 +237,10 @@ func (s *Stand) Evidence() []finding.Evidence {
 		{Name: "storage deficit", Value: tenth(a.Deficit), Low: nan, High: nan, Unit: "mm", Source: "water account, evapotranspiration " + orUnknown(a.Basis.String())},
 		{Name: "storage limit", Value: tenth(s.limit.Value), Low: tenth(s.limit.Low), High: tenth(s.limit.High), Unit: "mm", Source: s.limit.Basis},
 		{Name: "share of store left", Value: math.Round(1000*math.Max(0, s.Left())) / 1000, Low: nan, High: nan, Unit: "1", Source: "1 - deficit / limit"},
-		{Name: "rain on the day", Value: tenth(a.Precipitation), Low: nan, High: nan, Unit: "mm", Source: s.opts.RainFrom},
+		{Name: "rain on the day", Value: tenth(a.Precipitation), Low: nan, High: nan, Unit: "mm", Source: orUnknown(a.From.Rain)},
 	}
 	if n := s.State.Unseen; n > 0 {
-		list = append(list, finding.Evidence{Name: "days without rain data since the store was full", Value: float64(n), Low: nan, High: nan, Unit: "d", Source: s.opts.RainFrom})
+		list = append(list, finding.Evidence{Name: "days without rain data since the store was full", Value: float64(n), Low: nan, High: nan, Unit: "d", Source: or(s.from.Rain, s.opts.RainFrom)})
 	}
 	return list
 }
@@ -244,9 +252,11 @@ func round(v quantity.Millimetres) string { return fmt.Sprintf("%.0f mm", float6
 
 func percent(share float64) string { return fmt.Sprintf("%.0f %%", 100*math.Max(0, share)) }
 
-func orUnknown(s string) string {
+func orUnknown(s string) string { return or(s, "unknown") }
+
+func or(s, otherwise string) string {
 	if s == "" {
-		return "unknown"
+		return otherwise
 	}
 	return s
 }

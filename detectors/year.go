@@ -57,7 +57,7 @@ func (y *Year) firstReached(d quantity.Millimetres) (int, bool) {
 // settle takes one day of the account into the year.
 func (y *Year) settle(a *Account, anchored bool) {
 	y.Days++
-	if !a.Still && !a.Basis.Recent {
+	if !a.Still && !a.Basis.Usual {
 		y.Known++
 		if a.Basis.Measured {
 			y.Measured++
@@ -86,13 +86,13 @@ func (y *Year) peak() uint16 {
 	return uint16(math.Min(math.Round(float64(y.Max)*10), math.MaxUint16))
 }
 
-// yearDay is the day of the year from 1 to 365, 29 February counted with 1
-// March's eve (methods 0: 29 February folded).
+// yearDay is the day of the year from 1 to 365; 29 February counts as 1 March
+// (methods 0).
 func yearDay(d quantity.Day) int {
 	year, month, _ := d.Date()
 	n := d.YearDay()
 	leap := year%4 == 0 && (year%100 != 0 || year%400 == 0)
-	if leap && (month > 2 || n == 60) {
+	if leap && month > 2 {
 		n--
 	}
 	return n

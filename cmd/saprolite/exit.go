@@ -6,6 +6,7 @@ import (
 	"io"
 
 	"saprolite/ingest/broker"
+	"saprolite/ingest/daybook"
 )
 
 // Exit codes (design 5.9, after sysexits.h).
@@ -42,18 +43,30 @@ func exitCode(err error, errs io.Writer) int {
 	if exit, ok := errors.AsType[*exitError](err); ok {
 		return exit.code
 	}
+	if errors.Is(err, daybook.ErrOffset) {
+		return exitConfiguration
+	}
 	if b, ok := errors.AsType[*broker.Error](err); ok {
 		return brokerExit(b)
 	}
 	return exitBug
 }
 
+// opening is an error of opening the store: what fails there, such as a port
+// that is taken, fails again until somebody changes something.
+func opening(err error) error {
+	if b, ok := errors.AsType[*broker.Error](err); ok && b.Code == broker.Failed {
+		return exitWith(exitConfiguration, err)
+	}
+	return err
+}
+
 // brokerExit says whether starting again can help.
 func brokerExit(e *broker.Error) int {
 	switch e.Code {
-	case broker.InUse, broker.Full, broker.Unreachable, broker.NotFound, broker.Moved, broker.Closed, broker.NotRunning:
+	case broker.InUse, broker.Full, broker.Unreachable, broker.NotFound, broker.Moved, broker.Closed, broker.NotRunning, broker.Failed:
 		return exitTemporary
-	case broker.Refused, broker.Invalid, broker.Failed:
+	case broker.Refused, broker.Invalid:
 		return exitConfiguration
 	case broker.TooLarge:
 		return exitData

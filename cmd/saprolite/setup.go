@@ -1,7 +1,6 @@
 package main
 
 import (
-	"fmt"
 	"math"
 	"strings"
 
@@ -28,30 +27,20 @@ func engineSetup(cfg *config.Config, reg *config.Register) engine.Options {
 	return opts
 }
 
-// ranges are the gross ranges the operator set for a source: for all sources
-// first, for this one after, so that the narrower word counts.
+// ranges are the gross ranges the operator set for a source.
 func ranges(cfg *config.Config, source string) map[quantity.Quantity]engine.Range {
-	var out map[quantity.Quantity]engine.Range
-	set := func(l config.Limit) {
+	out := map[quantity.Quantity]engine.Range{}
+	for _, l := range cfg.Limits {
 		info, _ := l.Quantity.Info()
 		r := engine.Range{Lo: info.Lo, Hi: info.Hi}
-		if !math.IsNaN(l.Low) {
-			r.Lo = l.Low
+		low, high := cfg.Limit(source, l.Quantity)
+		if !math.IsNaN(low) {
+			r.Lo = low
 		}
-		if !math.IsNaN(l.High) {
-			r.Hi = l.High
-		}
-		if out == nil {
-			out = map[quantity.Quantity]engine.Range{}
+		if !math.IsNaN(high) {
+			r.Hi = high
 		}
 		out[l.Quantity] = r
-	}
-	for _, want := range []string{"", source} {
-		for _, l := range cfg.Limits {
-			if l.Source == want {
-				set(l)
-			}
-		}
 	}
 	return out
 }
@@ -114,7 +103,7 @@ func indices(s *config.Stand) []quantity.Quantity {
 // draw moves what a source measures to the stand: air temperature by the
 // lapse rate, wind to 2 m above the ground.
 func draw(reg *config.Register, s *config.Stand, q quantity.Quantity, d config.Draw) engine.Draw {
-	out := engine.Draw{Quantity: q, Source: d.Source, Scale: 1}
+	out := engine.Draw{Quantity: q, Source: d.Source, Scale: 1, From: place(s, d)}
 	switch q {
 	case quantity.AirTemperature, quantity.AirTemperatureMin, quantity.AirTemperatureMax:
 		if !math.IsNaN(d.HeightM) && d.Source != s.ID {
@@ -145,16 +134,5 @@ func place(s *config.Stand, d config.Draw) string {
 	if d.Source == s.ID {
 		return "the stand's own source " + d.Source
 	}
-	words := d.Source
-	if !math.IsNaN(d.DistanceKM) {
-		words += fmt.Sprintf(" (%.1f km", d.DistanceKM)
-		switch h := d.HeightM; {
-		case h >= 1:
-			words += fmt.Sprintf(", %.0f m lower", h)
-		case h <= -1:
-			words += fmt.Sprintf(", %.0f m higher", -h)
-		}
-		words += ")"
-	}
-	return words
+	return d.String()
 }

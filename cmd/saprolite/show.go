@@ -13,6 +13,7 @@ import (
 	"saprolite/cmd/saprolite/engine"
 	"saprolite/config"
 	"saprolite/detectors"
+	"saprolite/detectors/climate"
 	"saprolite/ingest/broker"
 	"saprolite/ingest/quantity"
 )
@@ -46,7 +47,7 @@ func runShow(cmd *cobra.Command, file, id string) error {
 	ctx := cmd.Context()
 	b, err := broker.OpenOrAttach(ctx, brokerOptions(cfg, zerolog.Nop()))
 	if err != nil {
-		return err
+		return opening(err)
 	}
 	defer b.Close(context.WithoutCancel(ctx))
 	books, err := b.Books(ctx)
@@ -70,7 +71,7 @@ func runShow(cmd *cobra.Command, file, id string) error {
 	if err != nil {
 		return exitWith(exitTemporary, fmt.Errorf("%w; the daemon does that at its next tick", err))
 	}
-	sheet{cmd.OutOrStdout()}.account(reg, stand, &setup, account)
+	sheet{cmd.OutOrStdout()}.account(stand, &setup, account)
 	return nil
 }
 
@@ -96,7 +97,7 @@ func (s sheet) line(name, value, origin string) {
 	fmt.Fprintf(s.out, "  %-22s %12s   %s\n", name, value, origin)
 }
 
-func (s sheet) account(reg *config.Register, stand *config.Stand, setup *engine.StandSetup, a *detectors.Stand) {
+func (s sheet) account(stand *config.Stand, setup *engine.StandSetup, a *detectors.Stand) {
 	t, limit := &a.Today, a.Limit()
 	fmt.Fprintf(s.out, "%s (%s), account of %s\n\n", stand.Name, stand.ID, t.Day)
 	s.line("storage deficit", mm(t.Deficit), "water missing from a full store")
@@ -108,14 +109,14 @@ func (s sheet) account(reg *config.Register, stand *config.Stand, setup *engine.
 		s.line(string(f.Kind), string(f.Level), "since "+f.Onset.String())
 	}
 	if since, blind := a.Blind(); blind {
-		s.line("blind", "", "no usable data since "+since.String()+"; the account stands still")
+		s.line("blind", "", "no usable data since "+since.String()+"; see feed-silent")
 	}
 
 	fmt.Fprintf(s.out, "\nThe day's water\n")
-	s.line("rain", mm(t.Precipitation), setup.Options.RainFrom)
+	s.line("rain", mm(t.Precipitation), or(t.From.Rain, "should come from "+setup.Options.RainFrom))
 	s.line("reaching the roots", mm(t.Flux.Input), "rain less what the canopy caught")
-	s.line("reference ET", mm(t.ReferenceET), t.Basis.Reference.String()+" from "+setup.Options.AirFrom)
-	s.line("actual ET", mm(t.Flux.ActualET), actual(reg, stand, t))
+	s.line("reference ET", mm(t.ReferenceET), reference(t, setup))
+	s.line("actual ET", mm(t.Flux.ActualET), actual(t))
 	s.line("overflow", mm(t.Flux.Overflow), "past a full store: recharge and runoff")
 
 	fmt.Fprintf(s.out, "\nThe years\n")
@@ -135,18 +136,38 @@ func (s sheet) account(reg *config.Register, stand *config.Stand, setup *engine.
 }
 
 // actual says how actual evapotranspiration came about.
-func actual(reg *config.Register, stand *config.Stand, t *detectors.Account) string {
+func actual(t *detectors.Account) string {
 	switch {
 	case t.Still:
 		return "unknown: the account stood still"
 	case t.Basis.Measured:
-		return "measured, " + from(reg, stand, quantity.ActualEvapotranspiration)
+		return "measured, " + t.From.ET
+	case t.Basis.Usual:
+		return "no data: what the stand usually uses at this time of year"
 	}
 	words := fmt.Sprintf("reference x coefficient %.2f", t.Coefficient)
 	if t.Flux.Stress < 1 {
 		words += fmt.Sprintf(" x stress %.2f", t.Flux.Stress)
 	}
 	return words + ", and what the canopy evaporates"
+}
+
+// reference says how reference evapotranspiration came about.
+func reference(t *detectors.Account, setup *engine.StandSetup) string {
+	switch t.Basis.Reference {
+	case climate.None:
+		return "should be made of data from " + setup.Options.AirFrom
+	case climate.ByMonthly:
+		return "monthly_reference_et_mm of the stands file"
+	}
+	return t.Basis.Reference.String() + ", " + t.From.Air
+}
+
+func or(words, otherwise string) string {
+	if words == "" {
+		return otherwise
+	}
+	return words
 }
 
 func begun(a *detectors.Stand) string {

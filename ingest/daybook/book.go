@@ -120,20 +120,28 @@ type Change struct {
 	First, Last quantity.Day
 }
 
+// Refuses says why an observation cannot be kept, nil if it can.
+func (b *Book) Refuses(o observation.Observation) *Refusal {
+	if _, ok := o.Quantity.Info(); !ok {
+		return &Refusal{fmt.Sprintf("unknown quantity %q", o.Quantity)}
+	}
+	switch o = o.In(b.opts.Offset); {
+	case o.End.Before(o.Start):
+		return &Refusal{fmt.Sprintf("ends (%s) before it starts (%s)", o.End.Format(time.RFC3339), o.Start.Format(time.RFC3339))}
+	case o.End.Sub(o.Start) > longest:
+		return &Refusal{fmt.Sprintf("speaks for %.3g days; composites of more than 2 days are not in this version yet, send daily values", o.End.Sub(o.Start).Hours()/24)}
+	}
+	return nil
+}
+
 // Add puts an observation into the book. The error is a *Refusal when the
 // observation cannot be kept, and anything else when the shelf failed.
 func (b *Book) Add(o observation.Observation) (Change, error) {
-	info, ok := o.Quantity.Info()
-	if !ok {
-		return Change{}, &Refusal{fmt.Sprintf("unknown quantity %q", o.Quantity)}
+	if refused := b.Refuses(o); refused != nil {
+		return Change{}, refused
 	}
+	info, _ := o.Quantity.Info()
 	o = o.In(b.opts.Offset)
-	if o.End.Before(o.Start) {
-		return Change{}, &Refusal{fmt.Sprintf("ends (%s) before it starts (%s)", o.End.Format(time.RFC3339), o.Start.Format(time.RFC3339))}
-	}
-	if o.End.Sub(o.Start) > longest {
-		return Change{}, &Refusal{fmt.Sprintf("speaks for %.3g days; composites of more than 2 days are not in this version yet, send daily values", o.End.Sub(o.Start).Hours()/24)}
-	}
 	r := Reading{
 		Start: o.Start.UnixNano(), End: o.End.UnixNano(), Value: oneNaN(o.Value), SD: oneNaN(o.SD), Flag: o.Flag,
 		Available: o.Available.Truncate(time.Second).UnixNano(),
@@ -260,14 +268,6 @@ func (b *Book) Day(q quantity.Quantity, d quantity.Day) (observation.DayValue, b
 func (b *Book) Has(q quantity.Quantity) (Span, bool) {
 	s, ok := b.head.Spans[q]
 	return s, ok
-}
-
-// Source returns the source's id.
-func (b *Book) Source() string { return b.opts.Source }
-
-// Quantities returns what the source has sent, sorted.
-func (b *Book) Quantities() []quantity.Quantity {
-	return slices.Sorted(maps.Keys(b.head.Spans))
 }
 
 // Changed returns the parts that changed since Saved, in the order in which

@@ -99,6 +99,20 @@ func TestFold(t *testing.T) {
 			t.Errorf("whole day of rain: %+v, want 5", v)
 		}
 	})
+	t.Run("hours without a reading are not dry hours", func(t *testing.T) {
+		b := open(t, Options{Source: "gauge", Offset: offset})
+		for hour := range 24 {
+			if v, ok, err := b.Day(quantity.Precipitation, first); err != nil || ok && v.Known() {
+				t.Fatalf("after %d hours: %+v, %v", hour, v, err)
+			}
+			if _, err := b.Add(rainAt(offset, float64(hour), 1, 0.5)); err != nil {
+				t.Fatal(err)
+			}
+		}
+		if v := day(t, b, quantity.Precipitation, first); !v.Known() || v.Value != 12 {
+			t.Errorf("%+v, want 12", v)
+		}
+	})
 	t.Run("a failed part of a total makes the day suspect", func(t *testing.T) {
 		b := open(t, Options{Source: "gauge", Offset: offset})
 		bad := rainAt(offset, 5, 1, 300)
@@ -127,6 +141,17 @@ func TestFold(t *testing.T) {
 			if v := day(t, b, q, first); v.Value != want {
 				t.Errorf("%s %g, want %g", q, v.Value, want)
 			}
+		}
+	})
+	t.Run("a reading of exactly the day outweighs one that overlaps it", func(t *testing.T) {
+		b := open(t, Options{Source: "gauge", Offset: offset, Interval: 24 * time.Hour})
+		for _, o := range []observation.Observation{rainAt(offset, 0, 24, 7), rainAt(offset, -2, 24, 40)} {
+			if _, err := b.Add(o); err != nil {
+				t.Fatal(err)
+			}
+		}
+		if v := day(t, b, quantity.Precipitation, first); v.Value != 7 || !v.Known() {
+			t.Errorf("%+v, want 7", v)
 		}
 	})
 	t.Run("known missing is missing, not zero", func(t *testing.T) {

@@ -78,11 +78,21 @@ func insert(list []Reading, r Reading) (out []Reading, written, changed bool) {
 //
 // Totals are summed, an interval across midnight in proportion to time
 // (methods J.1); means are weighted by time, instants equally; extremes are
-// the extreme. Of readings that overlap, the one that begins first and lasts
-// longest counts. A day with a part missing is suspect: for totals any gap or
-// unusable reading, otherwise less than 90 % of a known interval (methods J.1).
+// the extreme. A usable reading of exactly the day is the day, whatever else
+// overlaps it; of other readings that overlap, the one that begins first and
+// lasts longest counts. A day with a part missing is suspect: a total of
+// intervals with any gap between them, or with an unusable reading; of a known
+// interval, a total that is not all there and any other less than 90 % of it
+// (methods J.1). Instants of a source without an interval are taken as all
+// there is: a tipping bucket that reports each tip.
 func fold(how quantity.Fold, from, to int64, expected time.Duration, list []Reading) observation.DayValue {
 	const complete = 0.90 // methods J.1
+	for _, r := range list {
+		if r.Start == from && r.End == to && r.Flag.Usable() && !math.IsNaN(r.Value) {
+			list, expected = []Reading{r}, 0
+			break
+		}
+	}
 	v := observation.DayValue{Value: math.NaN(), SD: math.NaN(), Flag: observation.Missing}
 	var sum, weights, variance float64
 	var covered int64 // time for which there is a usable value
@@ -152,6 +162,9 @@ func fold(how quantity.Fold, from, to int64, expected time.Duration, list []Read
 	v.Value = sum
 	if how == quantity.Total && unusable > 0 {
 		v.Flag = observation.Suspect // a part of the total is not known
+	}
+	if how == quantity.Total && instants == 0 && covered < to-from {
+		v.Flag = observation.Suspect // what fell in between is not known
 	}
 	if expected > 0 {
 		seen := float64(covered)/float64(to-from) + float64(instants)*float64(expected)/float64(to-from)

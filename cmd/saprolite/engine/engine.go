@@ -14,7 +14,8 @@ import (
 
 // Options are what an engine is made of.
 type Options struct {
-	Place   string // goes into the ids of messages
+	Place   string        // goes into the ids of messages
+	Status  alerts.Status // of the messages; "" is Actual
 	Stands  []StandSetup
 	Sources []SourceSetup
 	Shelf   daybook.Shelf // nil: everything stays in memory
@@ -41,6 +42,7 @@ type Draw struct {
 	Source   string
 	// Scale and Add move the source's value to the stand: value*Scale + Add.
 	Scale, Add float64
+	From       string `cbor:"-"` // the source in words; changes nothing
 }
 
 // SourceSetup is a source that may speak.
@@ -108,7 +110,7 @@ type Counts struct {
 func New(opts Options) (*Engine, error) {
 	e := &Engine{
 		opts:    opts,
-		teller:  alerts.NewTeller(opts.Place, opts.Record),
+		teller:  alerts.NewTeller(opts.Place, opts.Status, opts.Record),
 		sources: map[string]*source{},
 		byID:    map[string]*stand{},
 		fresh:   map[string]quantity.Day{},

@@ -124,6 +124,10 @@ func (e *Engine) take(m Message, out *Outcome) error {
 }
 
 func (e *Engine) takeCSV(m Message, feed string, src *source, out *Outcome) error {
+	if len(m.Data) > wire.MaxCSVPost {
+		out.hold(feed, src.setup.ID, wire.TooLarge, fmt.Sprintf("a CSV post of %d bytes; send it in parts of at most %d", len(m.Data), wire.MaxCSVPost), m.Seq, "")
+		return nil
+	}
 	r, err := wire.NewCSVReader(bytes.NewReader(m.Data), m.Subject)
 	if err != nil {
 		out.hold(feed, src.setup.ID, codeOf(err), err.Error(), m.Seq, string(m.Data))

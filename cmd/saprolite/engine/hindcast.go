@@ -42,6 +42,9 @@ func (h *Hindcast) Add(o observation.Observation) *Held {
 	if code, reason := judge(o, src, time.Time{}); code != "" {
 		return &Held{Feed: LoadFeed, Source: o.Source, Code: code, Reason: reason, Record: describe(o)}
 	}
+	if refused := src.book.Refuses(o); refused != nil {
+		return &Held{Feed: LoadFeed, Source: o.Source, Code: heldNotKept, Reason: refused.Reason, Record: describe(o)}
+	}
 	at := o.Available
 	in := o.In(src.setup.Offset)
 	if at.IsZero() {

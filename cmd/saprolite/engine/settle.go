@@ -168,7 +168,7 @@ func (s *stand) inputs(d quantity.Day) (detectors.Inputs, error) {
 			return in, err
 		}
 		if ok && v.Known() {
-			in.Set(w.Quantity, v.Value*w.Scale+w.Add)
+			in.Set(w.Quantity, v.Value*w.Scale+w.Add, w.From)
 			have = w.Quantity
 		}
 	}

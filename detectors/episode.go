@@ -18,7 +18,7 @@ type Episode struct {
 	// Changed is the day on which Level was decided: hysteresis makes it later
 	// than Since.
 	Changed quantity.Day
-	Eased   bool // the last change was to a lesser level
+	Eased   bool // the last change was to a lesser level, whose own condition has not held since
 	// Unusual says why the episode is worth a message; "" while it is not.
 	// Once it is, it stays so to its end (design 5.6). Noted is the day it
 	// became so.

@@ -39,6 +39,12 @@ func (s *Stand) refreshLimit() {
 	}
 }
 
+// counts tells whether a closed year enters the statistics: it is complete,
+// and the stand had its roots.
+func (s *Stand) counts(y *Year) bool {
+	return y.Complete() && y.Start.Year()-s.opts.Established >= rootsDeepen
+}
+
 // maxima returns the largest deficit of each complete year. They come from
 // measured evapotranspiration or from demand without stress: a stand with a
 // configured limit never gets here (methods, decisions: "No circle").
@@ -46,7 +52,7 @@ func (s *Stand) maxima() []float64 {
 	var list []float64
 	for i := range s.years {
 		y := &s.years[i]
-		if y.Complete() && y.Start.Year()-s.opts.Established >= rootsDeepen {
+		if s.counts(y) {
 			list = append(list, float64(y.Max))
 		}
 	}
@@ -56,7 +62,7 @@ func (s *Stand) maxima() []float64 {
 func (s *Stand) measuredShare() (share float64, ok bool) {
 	var measured, all int
 	for i := range s.years {
-		if s.years[i].Complete() {
+		if s.counts(&s.years[i]) {
 			measured += int(s.years[i].Measured)
 			all += int(s.years[i].Known)
 		}

@@ -80,8 +80,11 @@ func (s *Stand) judgeStore() {
 	st.Low.at(finding.StoreLow, levels[worst], st.Levels[worst].Since, st.Day)
 	// Only while the level's own condition holds: a store that is refilling
 	// is told of no more.
-	if chanceBelow(set.Left[worst], left) >= enter && (st.Low.Unusual == "" || st.Low.Changed == st.Day) {
-		st.Low.worth(s.unusual(worst), st.Day)
+	if chanceBelow(set.Left[worst], left) >= enter {
+		st.Low.Eased = false
+		if st.Low.Unusual == "" || st.Low.Changed == st.Day {
+			st.Low.worth(s.unusual(worst), st.Day)
+		}
 	}
 }
 
@@ -104,7 +107,7 @@ func (s *Stand) unusual(level int) Unusual {
 	var years, reached, later, shallower int
 	for i := range s.years {
 		y := &s.years[i]
-		if !y.Complete() {
+		if !s.counts(y) {
 			continue
 		}
 		years++
@@ -145,7 +148,7 @@ func (s *Stand) why(e *Episode) string {
 	earliest := math.MaxInt
 	for i := range s.years {
 		y := &s.years[i]
-		if !y.Complete() {
+		if !s.counts(y) {
 			continue
 		}
 		n++

@@ -72,31 +72,32 @@ type showing struct {
 	feed   *broker.Broker // as a feed outside the daemon would use it
 	island *demo.Island
 
+	mails *demo.Mailbox
+	posts *demo.Hook
+
 	mu   sync.Mutex
 	told []alerts.Message // since they were printed
-	hook int              // posts the webhook has had
 }
 
 func runDemo(ctx context.Context, out io.Writer, dir string, fast bool) (err error) {
 	s := &showing{out: out, dir: dir, fast: fast, island: demo.NewIsland()}
-	mails := filepath.Join(dir, "mails")
-	if err := os.MkdirAll(mails, 0o755); err != nil {
+	for _, folder := range []string{s.mailsDir(), s.postsDir()} {
+		if err := os.MkdirAll(folder, 0o755); err != nil {
+			return err
+		}
+	}
+	if s.mails, err = demo.ReceiveMail(s.mailsDir()); err != nil {
 		return err
 	}
-	smtp, err := demo.ReceiveMail(mails)
-	if err != nil {
+	defer s.mails.Close()
+	if s.posts, err = demo.ReceiveWebhook(s.postsDir()); err != nil {
 		return err
 	}
-	defer smtp.Close()
-	hook, err := demo.ReceiveWebhook(s.posted)
-	if err != nil {
-		return err
-	}
-	defer hook.Close()
+	defer s.posts.Close()
 	cfgFile := filepath.Join(dir, "saprolite.yaml")
 	err = errors.Join(
 		os.WriteFile(filepath.Join(dir, "stands.geojson"), demo.Forest, 0o644),
-		os.WriteFile(cfgFile, demo.Settings(smtp.Address(), hook.URL()), 0o644),
+		os.WriteFile(cfgFile, demo.Settings(s.mails.Address(), s.posts.URL()), 0o644),
 	)
 	if err != nil {
 		return err
@@ -162,11 +163,8 @@ func (s *showing) note(m alerts.Message) {
 	s.told = append(s.told, m)
 }
 
-func (s *showing) posted(string) {
-	s.mu.Lock()
-	defer s.mu.Unlock()
-	s.hook++
-}
+func (s *showing) mailsDir() string { return filepath.Join(s.dir, "mails") }
+func (s *showing) postsDir() string { return filepath.Join(s.dir, "posts") }
 
 func (s *showing) taken() []alerts.Message {
 	s.mu.Lock()
@@ -255,10 +253,8 @@ func (s *showing) live(ctx context.Context) error {
 			return err
 		}
 		s.happenings(d)
-		for _, m := range s.taken() {
-			if err := sayMessage(s.out, m); err != nil {
-				return err
-			}
+		if err := s.sayTold(ctx); err != nil {
+			return err
 		}
 		if _, now, _ := (d + 1).Date(); now != month {
 			if month != 0 {
@@ -274,6 +270,48 @@ func (s *showing) live(ctx context.Context) error {
 			}
 		}
 	}
+	return nil
+}
+
+// sayTold prints what has been told, and where mails and posts of it lie.
+func (s *showing) sayTold(ctx context.Context) error {
+	told := s.taken()
+	if len(told) == 0 {
+		return nil
+	}
+	mails, posts := s.mails.Kept(), s.posts.Kept()
+	for _, m := range told {
+		if err := sayMessage(s.out, m); err != nil {
+			return err
+		}
+	}
+	if err := s.daemon.watch.waitDelivered(ctx, 30*time.Second); err != nil {
+		return err
+	}
+	if n := s.mails.Kept(); n > mails {
+		s.say("            -> mails/%s, posts/%s\n", numbers(mails, n, "eml"), numbers(posts, s.posts.Kept(), "json"))
+	}
+	if posts == 0 && s.posts.Kept() > 0 {
+		return s.firstPost()
+	}
+	return nil
+}
+
+func numbers(from, to int, ending string) string {
+	if to == from+1 {
+		return fmt.Sprintf("%03d.%s", to, ending)
+	}
+	return fmt.Sprintf("%03d.%s to %03d.%s", from+1, ending, to, ending)
+}
+
+// firstPost shows what a webhook gets.
+func (s *showing) firstPost() error {
+	body, err := os.ReadFile(filepath.Join(s.postsDir(), "001.json"))
+	if err != nil {
+		return err
+	}
+	const shown = 420 // bytes, a few lines
+	s.say("            This is how the first post begins, a CloudEvent:\n%s ...\n", wrap(string(body[:min(shown, len(body))]), 12))
 	return nil
 }
 
@@ -319,18 +357,11 @@ func (s *showing) end(ctx context.Context) error {
 	if err := s.daemon.watch.waitDelivered(ctx, 30*time.Second); err != nil {
 		return err
 	}
-	mails, err := filepath.Glob(filepath.Join(s.dir, "mails", "*.eml"))
-	if err != nil {
-		return err
-	}
-	s.mu.Lock()
-	posts := s.hook
-	s.mu.Unlock()
-	s.say("\nTwo years are over. Where to look:\n")
-	s.say("  mails      %d in %s (open one with a mail program)\n", len(mails), filepath.Join(s.dir, "mails"))
-	s.say("  webhook    %d posts were received\n", posts)
+	s.say("\nTwo years are over. Where to look, all of it in %s:\n", s.dir)
+	s.say("  mails      %d in mails/ (open one with a mail program)\n", s.mails.Kept())
+	s.say("  webhook    %d posts in posts/\n", s.posts.Kept())
 	s.say("  metrics    http://%s/metrics\n", s.daemon.watch.address())
 	s.say("  a stand    saprolite show ashlar-ridge --config %s\n", filepath.Join(s.dir, "saprolite.yaml"))
-	s.say("  the log    %s\n", filepath.Join(s.dir, "saprolite.log"))
+	s.say("  the log    saprolite.log\n")
 	return nil
 }

@@ -14,15 +14,40 @@ import (
 	"github.com/emersion/go-smtp"
 )
 
-// Mailbox is a mail server on this machine that writes each mail it is given
-// to a file.
-type Mailbox struct {
-	server   *smtp.Server
-	listener net.Listener
-	dir      string
+// folder numbers the files that come in.
+type folder struct {
+	dir, ending string
 
 	mu sync.Mutex
 	n  int
+}
+
+// keep writes what r gives to the next file.
+func (f *folder) keep(r io.Reader) error {
+	f.mu.Lock()
+	defer f.mu.Unlock()
+	file, err := os.Create(filepath.Join(f.dir, fmt.Sprintf("%03d.%s", f.n+1, f.ending)))
+	if err != nil {
+		return err
+	}
+	f.n++
+	_, err = io.Copy(file, r)
+	return errors.Join(err, file.Close())
+}
+
+// Kept is how many files have come in.
+func (f *folder) Kept() int {
+	f.mu.Lock()
+	defer f.mu.Unlock()
+	return f.n
+}
+
+// Mailbox is a mail server on this machine that writes each mail it is given
+// to a file.
+type Mailbox struct {
+	folder
+	server   *smtp.Server
+	listener net.Listener
 }
 
 // ReceiveMail starts a mailbox that writes to dir, on a free loopback port.
@@ -31,7 +56,7 @@ func ReceiveMail(dir string) (*Mailbox, error) {
 	if err != nil {
 		return nil, fmt.Errorf("demo mail server: %w", err)
 	}
-	m := &Mailbox{listener: l, dir: dir}
+	m := &Mailbox{listener: l, folder: folder{dir: dir, ending: "eml"}}
 	m.server = smtp.NewServer(m)
 	m.server.Domain = "localhost"
 	m.server.MaxMessageBytes = 1 << 20
@@ -57,39 +82,28 @@ func (session) Reset()                               {}
 func (session) Logout() error                        { return nil }
 
 // Data writes a mail to the next file.
-func (s session) Data(r io.Reader) error {
-	s.mu.Lock()
-	defer s.mu.Unlock()
-	s.n++
-	file, err := os.Create(filepath.Join(s.dir, fmt.Sprintf("%03d.eml", s.n)))
-	if err != nil {
-		return err
-	}
-	_, err = io.Copy(file, r)
-	return errors.Join(err, file.Close())
-}
+func (s session) Data(r io.Reader) error { return s.keep(r) }
 
-// Hook is a webhook receiver on this machine.
+// Hook is a webhook receiver on this machine that writes the body of each post
+// to a file.
 type Hook struct {
+	folder
 	server   *http.Server
 	listener net.Listener
 }
 
-// ReceiveWebhook starts a receiver on a free loopback port that calls posted
-// with each body.
-func ReceiveWebhook(posted func(body string)) (*Hook, error) {
+// ReceiveWebhook starts a receiver that writes to dir, on a free loopback port.
+func ReceiveWebhook(dir string) (*Hook, error) {
 	l, err := net.Listen("tcp", "127.0.0.1:0")
 	if err != nil {
 		return nil, fmt.Errorf("demo webhook receiver: %w", err)
 	}
-	h := &Hook{listener: l}
+	h := &Hook{listener: l, folder: folder{dir: dir, ending: "json"}}
 	h.server = &http.Server{ReadHeaderTimeout: 5 * time.Second, Handler: http.HandlerFunc(func(w http.ResponseWriter, r *http.Request) {
-		body, err := io.ReadAll(io.LimitReader(r.Body, 1<<20))
-		if err != nil {
-			http.Error(w, err.Error(), http.StatusBadRequest)
+		if err := h.keep(io.LimitReader(r.Body, 1<<20)); err != nil {
+			http.Error(w, err.Error(), http.StatusInternalServerError)
 			return
 		}
-		posted(string(body))
 		w.WriteHeader(http.StatusNoContent)
 	})}
 	go h.server.Serve(l) // ends with Close

@@ -182,11 +182,11 @@ func newView(m alerts.Message, place string) view {
 		}
 		v.Evidence = append(v.Evidence, r)
 	}
-	if v.Basis != "" || m.Threshold.Value.Known() {
-		v.Threshold = number(m.Threshold.Value, m.Threshold.Unit)
-	}
-	if !v.Ended { // an end has nothing to look at and no end of its own
+	if !v.Ended { // an end has nothing to look at and no end of its own, and what it was held against is past
 		v.FieldCheck, v.EndsWhen = oneLine(m.FieldCheck), oneLine(m.EndsWhen)
+		if v.Basis != "" || m.Threshold.Value.Known() {
+			v.Threshold = number(m.Threshold.Value, m.Threshold.Unit)
+		}
 	}
 	v.Small = []string{"Message " + m.MessageID() + ", sent " + m.Sent.UTC().Format(time.RFC3339)}
 	if m.Corrects != "" {
@@ -212,12 +212,13 @@ func when(m alerts.Message) string {
 	return "Since " + date(m.Onset) + ", as of " + date(m.Day)
 }
 
+// date writes a day as the detectors' sentences do (ISO 8601), so that one mail
+// has one way of writing days.
 func date(d quantity.Day) string {
 	if d == quantity.NoDay {
 		return "an unknown day"
 	}
-	y, month, day := d.Date()
-	return fmt.Sprintf("%d %s %d", day, month, y)
+	return d.String()
 }
 
 // howSure puts CAP's certainty, which counts independent sources, in plain
@@ -234,24 +235,28 @@ func howSure(certainty string) string {
 	return "not known"
 }
 
-// colour is the bar beside the first lines: the drier, the darker, so that the
-// order survives colour blindness and print; every level stands in words as
-// well. Teal for an end, slate for missing data. Our own choice.
+// colour is the bar beside the first lines. The levels are one hue, violet,
+// the less water the darker: what is told apart by lightness alone stays so in
+// every kind of colour blindness and in grey print. Violet, because green to
+// brown would be read as the state of the leaves and blue as water seen, and
+// the account has seen neither. What is no level of water has no hue: slate for
+// an end, charcoal for missing data. CIE lightness from 60 down to 11, any two
+// at least 6 apart; every level stands in words as well. Our own choice.
 func colour(m alerts.Message) htmltemplate.CSS {
 	if m.MsgType == alerts.Cancel {
-		return "#2b7a78"
+		return "#74828f"
 	}
 	switch m.Level {
 	case finding.DrawingDown:
-		return "#c9a66b"
+		return "#9d84d2"
 	case finding.Low:
-		return "#a06a2c"
+		return "#7f5fb8"
 	case finding.NearlySpent:
-		return "#6b3a16"
+		return "#553192"
 	case finding.Spent:
-		return "#2e1508"
+		return "#2a1046"
 	}
-	return "#5a6878"
+	return "#333537"
 }
 
 // number writes a value with about three significant digits and its unit; an

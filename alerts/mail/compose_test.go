@@ -66,6 +66,20 @@ func upperBeck(t testing.TB) alerts.Message {
 	}
 }
 
+// end is the end of upperBeck: its evidence is the account of the day it ended.
+func end(t testing.TB) alerts.Message {
+	m := upperBeck(t)
+	m.Revision, m.MsgType, m.EndedWhy, m.Urgency = 4, alerts.Cancel, alerts.Over, "Past"
+	m.Ended = day(t, "2031-10-09")
+	m.Day, m.Sent = m.Ended, time.Date(2031, 10, 10, 6, 0, 0, 0, time.UTC)
+	m.Headline = "Over since 2031-10-09: enough has come back to the store (at its worst: nearly spent)."
+	m.Reason = "It lasted from 2031-08-02 to 2031-10-08."
+	m.Evidence[0].Value, m.Evidence[0].Low, m.Evidence[0].High = 61.4, 48.2, 75
+	m.Evidence[2].Value = 0.571
+	m.EndsWhen = "It has ended."
+	return m
+}
+
 func write(t testing.TB, m alerts.Message, o Options) []byte {
 	t.Helper()
 	msg, err := Compose(m, o)
@@ -118,16 +132,15 @@ func open(t testing.TB, raw []byte) (h mail.Header, text, html string) {
 // The files are for looking at in a mail program; what must be in them is
 // stated by the other tests.
 func TestGolden(t *testing.T) {
-	ended := upperBeck(t)
-	ended.Revision, ended.MsgType, ended.EndedWhy, ended.Urgency = 4, alerts.Cancel, alerts.Over, "Past"
-	ended.Ended = day(t, "2031-10-09")
-	ended.Day, ended.Sent = ended.Ended, time.Date(2031, 10, 10, 6, 0, 0, 0, time.UTC)
-	ended.Headline = "Over since 2031-10-09 (was: nearly spent)."
-	ended.Reason = "It began on 2031-08-02 and has ended by the rule it was told with: ends when more than about 50 % of the store has been back for 5 days."
+	ended := end(t)
+	corrected := end(t)
+	corrected.EndedWhy, corrected.Late, corrected.Corrects = alerts.Corrected, true, upperBeck(t).MessageID()
+	corrected.Headline = "Corrected: the account with the data that have come since does not show this (was: nearly spent)."
+	corrected.Reason = "Late or revised data changed the account of the days before 2031-10-09. What was told before is withdrawn."
 	exercise := upperBeck(t)
 	exercise.Status, exercise.Revision, exercise.MsgType = alerts.Exercise, 1, alerts.Alert
 	exercise.Late = true
-	for name, m := range map[string]alerts.Message{"update": upperBeck(t), "ended": ended, "exercise": exercise} {
+	for name, m := range map[string]alerts.Message{"update": upperBeck(t), "ended": ended, "corrected": corrected, "exercise": exercise} {
 		t.Run(name, func(t *testing.T) {
 			got := write(t, m, options())
 			file := filepath.Join("testdata", name+".eml")
@@ -205,7 +218,7 @@ func TestFirstTwoLinesSayWhatWhereSinceWhenAndHowSure(t *testing.T) {
 	lines := strings.Split(text, "\r\n")
 	want := []string{
 		"Store nearly spent: 131 mm used of the 143 mm it can give, 8 % left.",
-		"Upper Beck, 12.4 ha, Hollin Forest. Since 2 August 2031, as of 14 August 2031. How sure: one source only.",
+		"Upper Beck, 12.4 ha, Hollin Forest. Since 2031-08-02, as of 2031-08-14. How sure: one source only.",
 	}
 	if d := cmp.Diff(want, lines[:2]); d != "" {
 		t.Errorf("text (-want +got):\n%s", d)
@@ -265,18 +278,27 @@ func TestExerciseAndEndAreMarked(t *testing.T) {
 	if !strings.HasPrefix(text, "EXERCISE. This is a rehearsal, not a warning.\r\n") || !strings.Contains(html, "EXERCISE. This is a rehearsal") {
 		t.Error("an exercise does not say so at the top of both parts")
 	}
-	m = upperBeck(t)
-	m.MsgType, m.Ended, m.Headline = alerts.Cancel, day(t, "2031-10-09"), "Over since 2031-10-09 (was: nearly spent)."
-	_, text, _ = open(t, write(t, m, options()))
-	if !strings.Contains(text, "Began on 2 August 2031, ended on 9 October 2031.") {
+	m = end(t)
+	_, text, html = open(t, write(t, m, options()))
+	if !strings.Contains(text, "Began on 2031-08-02, ended on 2031-10-09.") {
 		t.Errorf("an end does not say from when to when:\n%s", text)
 	}
-	if strings.Contains(text, "What to look at") || strings.Contains(text, "What ends it") {
-		t.Error("an end asks for a look or names an end")
+	for part, s := range map[string]string{"text": text, "HTML": html} {
+		for _, past := range []string{"What to look at", "What ends it", "hreshold", "129 mm", "nearly spent: less than", "Evidence"} {
+			if strings.Contains(s, past) {
+				t.Errorf("the %s of an end says %q, which is past", part, past)
+			}
+		}
+		if !strings.Contains(s, "The account now") || !strings.Contains(s, "61.4 mm") {
+			t.Errorf("the %s of an end does not show the account now", part)
+		}
 	}
 	m.EndedWhy = alerts.Corrected
 	_, corrected, _ := open(t, write(t, m, options()))
-	if !strings.Contains(corrected, "Told as begun on 2 August 2031, withdrawn on 9 October 2031.") {
+	if !strings.Contains(corrected, "The account now") || strings.Contains(corrected, "hreshold") {
+		t.Errorf("a correction does not show the account now, or a threshold:\n%s", corrected)
+	}
+	if !strings.Contains(corrected, "Told as begun on 2031-08-02, withdrawn on 2031-10-09.") {
 		t.Errorf("a correction does not say what is withdrawn:\n%s", corrected)
 	}
 	if !strings.Contains(text, alerts.Caution) {

@@ -17,6 +17,7 @@ import (
 	"net/http"
 	"net/netip"
 	"net/url"
+	"slices"
 	"strconv"
 	"strings"
 	"syscall"
@@ -42,7 +43,7 @@ type Options struct {
 	Source string // CloudEvents source, a URI reference such as /saprolite/hollin-forest
 
 	// AllowPrivate lists the private networks the webhook may reach, such as
-	// 10.1.0.0/16. The host of URL is judged by the address it resolves to at
+	// 10.1.0.0/16; each within one of RFC 1918, 4193 or 6598. The host of URL is judged by the address it resolves to at
 	// the moment of dialling. This machine needs no entry when URL names it by
 	// number or as localhost.
 	AllowPrivate []netip.Prefix
@@ -92,6 +93,11 @@ func New(o Options) (*Destination, error) {
 	if s, err := url.Parse(o.Source); err != nil || o.Source == "" || s.String() != o.Source {
 		bad("source %q: expected a URI reference such as /saprolite/hollin-forest", o.Source)
 	}
+	for _, p := range o.AllowPrivate {
+		if !within(private, p) {
+			bad("allow_private: %s is no private network; expected one within %s", p, list(private))
+		}
+	}
 	if len(errs) > 0 {
 		return nil, errors.Join(errs...)
 	}
@@ -140,10 +146,10 @@ func (d *Destination) Deliver(ctx context.Context, m alerts.Message) error {
 	}
 	req.Header.Set("Content-Type", "application/cloudevents+json; charset=utf-8")
 	req.Header.Set("User-Agent", "saprolite")
+	now := d.opts.Now()
+	req.Header.Set("webhook-id", m.MessageID()) // without a secret too: by it a receiver tells copies (design 5.7)
+	req.Header.Set("webhook-timestamp", strconv.FormatInt(now.Unix(), 10))
 	if d.key != nil {
-		now := d.opts.Now()
-		req.Header.Set("webhook-id", m.MessageID())
-		req.Header.Set("webhook-timestamp", strconv.FormatInt(now.Unix(), 10))
 		req.Header.Set("webhook-signature", sign(d.key, m.MessageID(), now, body))
 	}
 	res, err := d.client.Do(req)
@@ -186,14 +192,39 @@ func withoutURL(err error) error {
 	return err
 }
 
-// notPublic are the ranges a webhook must not reach unless allowed, besides
-// those netip knows as private, loopback, link-local, multicast and
-// unspecified: RFC 6890's shared, protocol, benchmark and reserved blocks, and
-// the two that wrap an IPv4 address (NAT64 of RFC 6052, 6to4).
-var notPublic = []netip.Prefix{
-	netip.MustParsePrefix("0.0.0.0/8"), netip.MustParsePrefix("100.64.0.0/10"), netip.MustParsePrefix("192.0.0.0/24"),
+// private are the networks that may be allowed, being somebody's own: RFC 1918,
+// the unique local addresses of RFC 4193, and the shared space of RFC 6598,
+// which networks laid over others use.
+var private = []netip.Prefix{
+	netip.MustParsePrefix("10.0.0.0/8"), netip.MustParsePrefix("172.16.0.0/12"), netip.MustParsePrefix("192.168.0.0/16"),
+	netip.MustParsePrefix("100.64.0.0/10"), netip.MustParsePrefix("fc00::/7"),
+}
+
+// never are the ranges a webhook cannot be allowed to reach, besides those
+// netip knows as loopback, link-local, multicast and unspecified: RFC 6890's
+// protocol, benchmark and reserved blocks, and the two that wrap an IPv4
+// address (NAT64 of RFC 6052, 6to4).
+var never = []netip.Prefix{
+	netip.MustParsePrefix("0.0.0.0/8"), netip.MustParsePrefix("192.0.0.0/24"),
 	netip.MustParsePrefix("198.18.0.0/15"), netip.MustParsePrefix("240.0.0.0/4"),
 	netip.MustParsePrefix("64:ff9b::/96"), netip.MustParsePrefix("64:ff9b:1::/48"), netip.MustParsePrefix("2002::/16"),
+}
+
+func contains(networks []netip.Prefix, ip netip.Addr) bool {
+	return slices.ContainsFunc(networks, func(p netip.Prefix) bool { return p.Contains(ip) })
+}
+
+// within tells whether all of p lies in one of the networks.
+func within(networks []netip.Prefix, p netip.Prefix) bool {
+	return p.IsValid() && slices.ContainsFunc(networks, func(n netip.Prefix) bool { return n.Bits() <= p.Bits() && n.Contains(p.Addr()) })
+}
+
+func list(networks []netip.Prefix) string {
+	var names []string
+	for _, n := range networks {
+		names = append(names, n.String())
+	}
+	return strings.Join(names, ", ")
 }
 
 // checkAddress judges the resolved ip:port just before it is dialled, so that
@@ -210,16 +241,10 @@ func checkAddress(address string, local bool, allowed []netip.Prefix) error {
 		}
 		return fmt.Errorf("the address says this machine, but it resolves to %s", ip)
 	}
-	for _, p := range allowed {
-		if p.Contains(ip) {
-			return nil
-		}
-	}
-	private := ip.IsPrivate() || ip.IsLoopback() || ip.IsLinkLocalUnicast() || ip.IsMulticast() || ip.IsUnspecified()
-	for _, p := range notPublic {
-		private = private || p.Contains(ip)
-	}
-	if private {
+	switch {
+	case ip.IsLoopback(), ip.IsLinkLocalUnicast(), ip.IsMulticast(), ip.IsUnspecified(), contains(never, ip):
+		return fmt.Errorf("the address resolves to %s, which no webhook may reach; correct the url or what its name resolves to", ip)
+	case contains(private, ip) && !contains(allowed, ip):
 		return fmt.Errorf("the address resolves to %s, which is not public; list its network under allow_private if that is meant", ip)
 	}
 	return nil

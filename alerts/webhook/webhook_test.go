@@ -147,15 +147,23 @@ func TestDeliver(t *testing.T) {
 	}
 }
 
+// Without a secret the message is still named and dated, by headers a receiver
+// can tell copies by; only the signature is left out.
 func TestWithoutSecretNothingIsSigned(t *testing.T) {
+	hits := 0
 	s := httptest.NewServer(http.HandlerFunc(func(_ http.ResponseWriter, r *http.Request) {
-		if h := r.Header.Get("webhook-signature"); h != "" {
-			t.Errorf("signed with %q", h)
+		hits++
+		for name, want := range map[string]string{
+			"webhook-id": message().MessageID(), "webhook-timestamp": "1614265330", "webhook-signature": "",
+		} {
+			if got := r.Header.Get(name); got != want {
+				t.Errorf("%s: %q, want %q", name, got, want)
+			}
 		}
 	}))
 	defer s.Close()
-	if err := post(t, Options{URL: s.URL}, message()); err != nil {
-		t.Fatal(err)
+	if err := post(t, Options{URL: s.URL, Now: func() time.Time { return time.Unix(vectorTime, 0) }}, message()); err != nil || hits != 1 {
+		t.Fatalf("%d posts, %v", hits, err)
 	}
 }
 
@@ -261,6 +269,22 @@ func TestPrivateAddressesAreRefused(t *testing.T) {
 			t.Errorf("%s: %v", address, err)
 		}
 	}
+	// The error sends the operator to allow_private only where that helps.
+	for address, hint := range map[string]bool{
+		"10.2.0.1:443": true, "192.168.1.1:443": true, "100.64.0.1:443": true, "[fd00::1]:443": true,
+		"127.0.0.1:443": false, "169.254.169.254:80": false, "0.0.0.0:443": false, "[64:ff9b::7f00:1]:443": false,
+	} {
+		err := checkAddress(address, false, nil)
+		if err == nil || strings.Contains(err.Error(), "allow_private") != hint {
+			t.Errorf("%s: %v; want the hint: %v", address, err, hint)
+			continue
+		}
+		ip := netip.MustParseAddrPort(address).Addr()
+		_, err = New(Options{Name: "office", URL: "https://hooks.hollin.example/a", Source: "/s", AllowPrivate: []netip.Prefix{netip.PrefixFrom(ip, ip.BitLen())}})
+		if (err == nil) != hint {
+			t.Errorf("allow_private: %s: %v", ip, err)
+		}
+	}
 	if err := checkAddress("10.1.2.3:80", true, intranet); err == nil {
 		t.Error("localhost that resolves to another machine is dialled")
 	}
@@ -308,6 +332,9 @@ func TestNewRefuses(t *testing.T) {
 		"secret short":   func(o *Options) { o.Secret = "whsec_AAAA" },
 		"secret too big": func(o *Options) { o.Secret = "whsec_" + strings.Repeat("AAAA", 22) },
 		"empty secret":   func(o *Options) { o.Secret = "whsec_" },
+		"all networks":   func(o *Options) { o.AllowPrivate = []netip.Prefix{netip.MustParsePrefix("0.0.0.0/0")} },
+		"public network": func(o *Options) { o.AllowPrivate = []netip.Prefix{netip.MustParsePrefix("93.184.216.0/24")} },
+		"no network":     func(o *Options) { o.AllowPrivate = []netip.Prefix{{}} },
 	} {
 		o := good
 		change(&o)

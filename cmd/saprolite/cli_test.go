@@ -16,7 +16,7 @@ import (
 func TestExitCodes(t *testing.T) {
 	dir := t.TempDir()
 	stands, history := seattleFiles(t, dir, "")
-	settings := write(t, dir, "good.yaml", "stands: stands.geojson\n")
+	settings := write(t, dir, "good.yaml", "stands: stands.geojson\nbroker: {embedded: {listen: \"127.0.0.1:0\"}}\n")
 	badSettings := write(t, dir, "bad.yaml", "stands: stands.geojson\nplase: Corrow\n")
 	badStands := write(t, dir, "bad.geojson", `{"type": "FeatureCollection", "features": [{"type": "Feature", "id": "North", "geometry": null, "properties": {}}]}`)
 	badHistory := write(t, dir, "bad.csv", "source,quantity,start,value,unit\nseattle,precipitation,2012-01-01,3,mm\nseattle,rain,2012-01-02,3,mm\nnowhere,precipitation,2012-01-02,3,mm\nseattle,precipitation,2012-01-03,-3,mm\n")

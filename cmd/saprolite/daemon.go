@@ -51,7 +51,7 @@ func openDaemon(ctx context.Context, cfg *config.Config, reg *config.Register, l
 	d := &daemon{cfg: cfg, reg: reg, log: log, settle: make(chan struct{}, 1)}
 	var err error
 	if d.broker, err = broker.Open(ctx, brokerOptions(cfg, log)); err != nil {
-		return nil, err
+		return nil, opening(err)
 	}
 	// The books are read and written until the very end, whatever ctx does.
 	if d.keeper, err = newKeeper(context.WithoutCancel(ctx), cfg, reg, d.broker, log); err != nil {

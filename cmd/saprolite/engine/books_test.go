@@ -41,6 +41,7 @@ func runStraight(t must, seed uint64) straight {
 // any message with the books of some time before, or killed between two parts
 // of a save: the account ends as if never stopped and nothing is told twice.
 func TestRestoredEqualsNeverStopped(t *testing.T) {
+	t.Parallel()
 	var runs []straight
 	var all []alerts.Message
 	for seed := range uint64(3) {

@@ -22,6 +22,7 @@ import (
 // repetition and with ticks anywhere in between, make the same pages, heads
 // and days, to the bit, and leave the same alerts open.
 func TestOrderDoesNotMatter(t *testing.T) {
+	t.Parallel()
 	const mostDelay = 15 // days
 	var all []alerts.Message
 	rapid.Check(t, func(t *rapid.T) {

@@ -52,6 +52,7 @@ func until(list []observation.Observation, last quantity.Day) (out []observation
 // Design 5.8: a history cut at a day gives the same lines up to that day as
 // the whole one, though values come late and are revised.
 func TestNoPeeking(t *testing.T) {
+	t.Parallel()
 	const days = 270
 	first := quantity.DateOf(2031, time.March, 20)
 	list := history(first, days, 8)
@@ -74,6 +75,7 @@ func TestNoPeeking(t *testing.T) {
 // Design 4.4: the same history, one message after the other with a tick every
 // hour, gives the daily file of the hindcast byte for byte, and the same lines.
 func TestHindcastEqualsLive(t *testing.T) {
+	t.Parallel()
 	const days = 8 * 365 // enough years for a storage limit from them
 	list := history(firstDay, days, 8)
 	h, cut := cast(t, list, quantity.NoDay)

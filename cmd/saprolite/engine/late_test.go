@@ -15,6 +15,7 @@ import (
 // Data older than all checkpoints but the yearly ones settle to what they would
 // have been in time, and so do data from before the account began.
 func TestOldDataSettleAsInTime(t *testing.T) {
+	t.Parallel()
 	const days = 4 * 365
 	list := history(firstDay, days, 5)
 	late := daily("gauge-1", quantity.Precipitation, firstDay+200, 90)

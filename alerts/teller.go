@@ -168,9 +168,13 @@ func (t *Teller) tellKind(stand Stand, kind finding.Kind, w Wanted) ([]Message, 
 }
 
 func (p Passed) finding() finding.Finding {
+	what := fmt.Sprintf("the store was %s at its worst", p.Worst)
+	if p.Kind == finding.FeedSilent {
+		what = "no data came"
+	}
 	return finding.Finding{
 		Kind: p.Kind, Level: p.Worst, Onset: p.Onset, Day: p.Ended - 1, Ended: quantity.NoDay, Sources: 1,
-		Headline:   fmt.Sprintf("Recorded: the account reached %s between %s and %s.", p.Worst, p.Onset, p.Ended),
+		Headline:   fmt.Sprintf("Recorded: from %s to %s %s.", p.Onset, p.Ended-1, what),
 		Reason:     "The data came in after it had passed, so nobody was told.",
 		FieldCheck: "Nothing to look at: it has passed.",
 		EndsWhen:   "It has ended.",

@@ -56,8 +56,6 @@ func (in *Inputs) Set(q quantity.Quantity, v float64, from string) bool {
 		in.ActualET, in.From.ET = quantity.Millimetres(v), from
 	case quantity.ReferenceEvapotranspiration:
 		w.Given, in.From.Air = quantity.Millimetres(v), from
-	case quantity.AirTemperature:
-		w.TMean = quantity.Celsius(v)
 	case quantity.AirTemperatureMin:
 		w.TMin = quantity.Celsius(v)
 	case quantity.AirTemperatureMax:
@@ -94,7 +92,6 @@ var Draws = [...]quantity.Quantity{
 	quantity.Precipitation,
 	quantity.ActualEvapotranspiration,
 	quantity.ReferenceEvapotranspiration,
-	quantity.AirTemperature,
 	quantity.AirTemperatureMin,
 	quantity.AirTemperatureMax,
 	quantity.RelativeHumidity,

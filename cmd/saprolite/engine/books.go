@@ -33,6 +33,9 @@ type cursorBook struct {
 	// Unsaved is what may have reached pages but not heads, while a save of
 	// several batches is under way: those stands settle again.
 	Unsaved map[string]quantity.Day
+	// Stream is when the stream was created that Seq is of, in Unix
+	// nanoseconds; 0: not known.
+	Stream int64
 }
 
 // HeadBook is a stand as it is kept.
@@ -98,6 +101,9 @@ func (e *Engine) readBooks() error {
 		e.cursor = c.Seq
 		if c.Now != 0 {
 			e.now = time.Unix(c.Now, 0).UTC()
+		}
+		if c.Stream != 0 {
+			e.stream = time.Unix(0, c.Stream).UTC()
 		}
 		for id, d := range c.Fresh {
 			earliest(e.fresh, id, d)
@@ -175,6 +181,9 @@ func (e *Engine) cursorEntry() (daybook.Entry, error) {
 	c := cursorBook{Seq: e.cursor, Fresh: e.fresh}
 	if !e.now.IsZero() {
 		c.Now = e.now.Unix()
+	}
+	if !e.stream.IsZero() {
+		c.Stream = e.stream.UnixNano()
 	}
 	data, err := encoding.Marshal(c)
 	if err != nil {

@@ -69,6 +69,7 @@ type Engine struct {
 
 	now    time.Time // of the last tick
 	cursor uint64    // last message taken in
+	stream time.Time // when the stream was created that cursor is of; zero: not known
 	// fresh is the first changed day of each source since the last tick,
 	// unsaved the same since the last save.
 	fresh, unsaved map[string]quantity.Day
@@ -151,6 +152,15 @@ func (e *Engine) Now() time.Time { return e.now }
 
 // Cursor returns the sequence of the last message taken in.
 func (e *Engine) Cursor() uint64 { return e.cursor }
+
+// Stream tells the stream that Cursor is of from another of its name: it is
+// the time at which it was created; zero when that is not known.
+func (e *Engine) Stream() time.Time { return e.stream }
+
+// Restart takes the stream created at that time in from its beginning: another
+// one has taken the name, or an older copy of it was put back, and sequences
+// mean other messages now. Accounts, pages and the clock stay as they are.
+func (e *Engine) Restart(stream time.Time) { e.cursor, e.stream = 0, stream }
 
 // Counts returns the totals since the engine was made.
 func (e *Engine) Counts() Counts { return e.counts }

@@ -5,9 +5,11 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"slices"
 	"strings"
 	"time"
 
+	"saprolite/detectors"
 	"saprolite/ingest/daybook"
 	"saprolite/ingest/observation"
 	"saprolite/ingest/quantity"
@@ -227,7 +229,7 @@ func (e *Engine) add(o observation.Observation, src *source) error {
 		return err
 	}
 	e.counts.Observations++
-	if change.Any {
+	if change.Any && (isVegetationIndex(o.Quantity) || slices.Contains(detectors.Draws[:], o.Quantity)) {
 		earliest(e.fresh, src.setup.ID, change.First)
 		earliest(e.unsaved, src.setup.ID, change.First)
 	}

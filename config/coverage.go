@@ -169,6 +169,7 @@ func (v viewer) fromTemperatures(low, high Draw, more func(string)) string {
 			lack = append(lack, need.word)
 		}
 	}
+	by, taken := "by Penman-Monteith from the weather of "+distinct(weather...), v.windHeight()
 	height := !math.IsNaN(float64(v.stand.Elevation))
 	switch {
 	case len(lack) > 1:
@@ -184,11 +185,21 @@ func (v viewer) fromTemperatures(low, high Draw, more func(string)) string {
 		more("elevation_m of the stand: water use by Penman-Monteith")
 	case len(lack) == 1:
 		more(lack[0] + ": Penman-Monteith without an assumption")
-		return "by Penman-Monteith from the weather of " + distinct(weather...) + ", " + lack[0] + " assumed"
+		return by + ", " + lack[0] + " assumed" + taken
 	default:
-		return "by Penman-Monteith from the weather of " + distinct(weather...)
+		return by + taken
 	}
 	return "by Hargreaves from temperatures of " + temperatures
+}
+
+// windHeight says which height an anemometer is taken to have that does not say:
+// the one for which Penman-Monteith is written (FAO-56 equation 6).
+func (v viewer) windHeight() string {
+	d, ok := v.source(quantity.WindSpeed)
+	if !ok || !math.IsNaN(float64(v.Source(d.Source).Height)) {
+		return ""
+	}
+	return "; wind of " + d.Source + " taken as 2 m above the ground, as it has no height_m"
 }
 
 // whole returns the sources of the first set of quantities of which each has a

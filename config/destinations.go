@@ -4,6 +4,7 @@ import (
 	"encoding/base64"
 	"fmt"
 	"net"
+	"net/netip"
 	"strings"
 )
 
@@ -34,6 +35,9 @@ type Mail struct {
 type Webhook struct {
 	URL    string
 	Secret Secret // whsec_ and base64 (Standard Webhooks 1.0.0); unset: unsigned
+	// AllowPrivate are the private networks the URL's name may resolve into;
+	// without one a webhook reaches public addresses only.
+	AllowPrivate []netip.Prefix
 }
 
 // The words of design 5.6 that filters take: what this version raises, and
@@ -51,7 +55,7 @@ func (l *loader) destinations(top *section) []Destination {
 	var out []Destination
 	seen := names{}
 	for _, s := range l.list(top, "destinations") {
-		d := Destination{Name: seen.read(s)}
+		d := Destination{Name: seen.read(s, isID)}
 		s.later = []string{"cap", "zone", "quiet_hours", "gather_for", "next_after", "remind_after", "most_a_day", "most_a_week"}
 		mail, hasMail := s.open("mail")
 		webhook, hasWebhook := s.open("webhook")
@@ -69,6 +73,7 @@ func (l *loader) destinations(top *section) []Destination {
 		}
 		d.Kinds = s.texts("kinds", oneOfNow(kinds, laterKinds))
 		d.Groups = s.texts("groups", oneLine)
+		l.placeTexts(s.node.get("groups"), func(group string) string { return groupField(d.Name, group) })
 		d.Levels = s.texts("levels", oneOf(levels...))
 		s.done()
 		out = append(out, d)
@@ -110,6 +115,9 @@ func (l *loader) webhook(s *section) *Webhook {
 	w := &Webhook{URL: s.text("url", "", webhookURL), Secret: l.secret(s, "secret_file")}
 	if w.Secret.Set() && !standardSecret(w.Secret.Reveal()) {
 		s.complainAt("secret_file", "its content is not whsec_ and the base64 of 24 to 64 bytes", `make one: printf 'whsec_%s\n' "$(openssl rand -base64 32)"`)
+	}
+	for _, text := range s.texts("allow_private", privateNetwork) {
+		w.AllowPrivate = append(w.AllowPrivate, netip.MustParsePrefix(text)) // obeyed privateNetwork
 	}
 	s.done()
 	return w

@@ -7,8 +7,8 @@
 // of a file are returned at once as Problems. What may be left out has a
 // default, given with its source where the default is defined.
 //
-// LoadRegister and Load are the two ways in; Together finds what only shows
-// when both files are read side by side. Register.Draws says which source a
+// LoadRegister and Load read one of them, LoadBoth the two; Together finds what
+// only shows when both are read side by side. Register.Draws says which source a
 // stand takes each quantity from, and Register.Coverage what can be answered
 // with them.
 //

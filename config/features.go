@@ -98,7 +98,7 @@ func (r *reading) source(f, p *section, id string) Source {
 	s.Elevation = elevation(p)
 	s.Height = quantity.Metres(p.number("height_m", nan, between(0, tallestMast, "m", "write metres above the ground")))
 	s.UTCOffset = utcOffset(p, g.Point[0])
-	s.Feed = p.text("feed", "", isID)
+	s.Feed = p.text("feed", "", isFeed)
 	s.Interval = p.duration("interval", 0, time.Second, longestInterval)
 	s.Latency = p.duration("latency", 0, 0, longestInterval)
 	s.Unit = p.text("unit", "", oneLine)

@@ -34,6 +34,7 @@ func (l *loader) limits(top *section) []Limit {
 			s.complain(f.at, s.field(f.name), "neither a quantity nor a source: "+wrong, cure)
 			continue
 		}
+		l.places[sourceLimitField(f.name)] = f.at
 		for j := range inner.node.fields {
 			g := &inner.node.fields[j]
 			if g.value.kind != null {

@@ -6,6 +6,7 @@ import (
 	"net/mail"
 	"net/netip"
 	"net/url"
+	"slices"
 	"strconv"
 	"strings"
 )
@@ -114,6 +115,33 @@ func webhookURL(s string) (string, string) {
 		return fmt.Sprintf("%q would cross the network in clear", clip(s)), "write https:// in place of http://"
 	}
 	return fmt.Sprintf("unknown scheme %q", clip(u.Scheme)), cure
+}
+
+// privateNetworks are those that are somebody's own: RFC 1918, the shared space
+// of RFC 6598, which networks laid over others use, and the unique local
+// addresses of RFC 4193.
+var privateNetworks = []netip.Prefix{
+	netip.MustParsePrefix("10.0.0.0/8"), netip.MustParsePrefix("172.16.0.0/12"), netip.MustParsePrefix("192.168.0.0/16"),
+	netip.MustParsePrefix("100.64.0.0/10"), netip.MustParsePrefix("fc00::/7"),
+}
+
+// privateNetwork wants a network in CIDR notation (RFC 4632 section 3.1) that
+// is private as a whole.
+func privateNetwork(s string) (string, string) {
+	const cure = `write the receiver's network, such as "10.1.0.0/16"`
+	if ip, err := netip.ParseAddr(s); err == nil && ip.Zone() == "" {
+		return fmt.Sprintf("%q is an address, want a network", clip(s)), fmt.Sprintf("for this address alone write %q", netip.PrefixFrom(ip, ip.BitLen()))
+	}
+	p, err := netip.ParsePrefix(s)
+	switch {
+	case err != nil:
+		return fmt.Sprintf("%q is not a network", clip(s)), cure
+	case !slices.ContainsFunc(privateNetworks, func(n netip.Prefix) bool { return n.Bits() <= p.Bits() && n.Contains(p.Addr()) }):
+		return fmt.Sprintf("%q is not a private network, which lies within 10.0.0.0/8, 172.16.0.0/12, 192.168.0.0/16, 100.64.0.0/10 or fc00::/7", s), "remove it; public addresses are reached without, this machine by http://127.0.0.1 or localhost"
+	case p != p.Masked():
+		return fmt.Sprintf("%q names an address within the network", s), fmt.Sprintf("write %q", p.Masked())
+	}
+	return "", ""
 }
 
 // parseURL never repeats the URL whole: it may hold a password.

@@ -76,8 +76,13 @@ func (s *sheet) err() error {
 	if len(s.problems) == 0 {
 		return nil
 	}
+	s.sort()
+	return s.problems
+}
+
+// sort brings the problems into the order of their places.
+func (s *sheet) sort() {
 	slices.SortStableFunc(s.problems, func(a, b Problem) int {
 		return cmp.Or(cmp.Compare(a.Line, b.Line), cmp.Compare(a.Column, b.Column))
 	})
-	return s.problems
 }

@@ -115,6 +115,18 @@ func isID(s string) (string, string) {
 	return err.Error(), `write for example "north-slope"`
 }
 
+// loadFeed is the feed of `saprolite load`: the operator's own hand, which may
+// speak for every source.
+const loadFeed = "load"
+
+// isFeed wants an id that a way in may have.
+func isFeed(s string) (string, string) {
+	if s == loadFeed {
+		return `"load" is the feed of saprolite load, which may speak for every source`, `give the feed another name, such as "loggers"`
+	}
+	return isID(s)
+}
+
 // tidyID proposes an id close to what was written.
 func tidyID(s string) string {
 	s = strings.Map(func(r rune) rune {

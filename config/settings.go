@@ -20,6 +20,9 @@ type Config struct {
 	Limits       []Limit
 	Thresholds   Thresholds
 	Destinations []Destination
+
+	// places is where stands what Together looks at, by its field in a problem.
+	places map[string]place
 }
 
 // Feed is one way in with its own name, account and permissions.
@@ -48,11 +51,22 @@ type loader struct {
 	*sheet
 	dir         string // of the yaml file
 	credentials string // $CREDENTIALS_DIRECTORY, or empty
+	places      map[string]place
 }
 
 // Load reads saprolite.yaml. The error is Problems when the file could be
 // read, and says what the operating system said when it could not.
 func Load(file string) (*Config, error) {
+	c, err := readSettings(file)
+	if err != nil {
+		return nil, err
+	}
+	return c, nil
+}
+
+// readSettings is Load that gives what could be read beside the problems; nil if
+// nothing could.
+func readSettings(file string) (*Config, error) {
 	data, err := os.ReadFile(file)
 	if err != nil {
 		return nil, fmt.Errorf("reading the settings: %w", err)
@@ -69,22 +83,26 @@ func Default(dir string) *Config {
 	return c
 }
 
+// parse returns what could be read beside the problems. Stands is empty when it
+// is not known which file was meant.
 func parse(file string, data []byte, credentials string) (*Config, error) {
-	l := &loader{sheet: &sheet{file: filepath.ToSlash(file)}, dir: filepath.Dir(file), credentials: credentials}
-	c := &Config{File: file}
+	l := &loader{sheet: &sheet{file: filepath.ToSlash(file)}, dir: filepath.Dir(file), credentials: credentials, places: map[string]place{}}
+	c := &Config{File: file, places: l.places}
 	if root, ok := l.parseYAML(data); ok {
 		l.config(c, l.section(&root, ""))
 	}
-	if err := l.err(); err != nil {
-		return nil, err
-	}
-	return c, nil
+	return c, l.err()
 }
 
 func (l *loader) config(c *Config, top *section) {
 	c.Place = top.text("place", DefaultPlace, oneLine)
 	c.Data = l.path(top.text("data", DefaultData, oneLine))
-	c.Stands = l.path(top.text("stands", DefaultStands, oneLine))
+	if stands := top.text("stands", "", oneLine); stands != "" {
+		c.Stands = l.path(stands)
+		l.places["stands"] = top.node.get("stands").at
+	} else if top.node.get("stands") == nil && !top.wrong {
+		c.Stands = l.path(DefaultStands)
+	}
 	c.Broker = l.broker(top)
 	c.Feeds = l.feeds(top)
 	c.HTTP = l.http(top)
@@ -109,6 +127,18 @@ func (l *loader) path(p string) string {
 	return filepath.Join(l.dir, p)
 }
 
+// placeTexts keeps where each text of a list, or a single one, is written.
+func (l *loader) placeTexts(n *node, field func(text string) string) {
+	if n == nil {
+		return
+	}
+	for _, item := range append([]node{*n}, n.list()...) {
+		if item.kind == text {
+			l.places[field(item.text)] = item.at
+		}
+	}
+}
+
 // list opens each object of a property that is a list of objects.
 func (l *loader) list(top *section, name string) []*section {
 	n := top.of(name, list, "begin each entry with - on its own line")
@@ -126,9 +156,9 @@ func (l *loader) list(top *section, name string) []*section {
 // names reads the name of each entry of a list: an id, given once.
 type names map[string]int // name -> line
 
-func (seen names) read(s *section) string {
+func (seen names) read(s *section, wanted rule[string]) string {
 	s.required("name", `give it a name of a-z, 0-9, - and _`)
-	name := s.text("name", "", isID)
+	name := s.text("name", "", wanted)
 	if name == "" {
 		return ""
 	}
@@ -145,7 +175,7 @@ func (l *loader) feeds(top *section) []Feed {
 	var out []Feed
 	seen := names{}
 	for _, s := range l.list(top, "feeds") {
-		f := Feed{Name: seen.read(s)}
+		f := Feed{Name: seen.read(s, isFeed)}
 		f.Kind = s.text("kind", "nats", oneOfNow([]string{"nats"}, []string{"mqtt", "http", "files"}))
 		f.Credentials = l.secret(s, "credentials")
 		s.done()

@@ -6,6 +6,7 @@ import (
 	"fmt"
 	"log/slog"
 	"math"
+	"net/netip"
 	"os"
 	"path/filepath"
 	"regexp"
@@ -21,7 +22,10 @@ import (
 	"saprolite/ingest/quantity"
 )
 
-var secrets = cmp.AllowUnexported(Secret{})
+var (
+	secrets          = cmp.AllowUnexported(Secret{})
+	unplacedSettings = cmpopts.IgnoreUnexported(Config{}) // where things are written: TestTogether
+)
 
 func TestSettings(t *testing.T) {
 	t.Setenv("CREDENTIALS_DIRECTORY", "")
@@ -54,11 +58,11 @@ func TestSettings(t *testing.T) {
 			},
 			{
 				Name:    "control-room",
-				Webhook: &Webhook{"http://127.0.0.1:8080/hook", Secret{"whsec_AAECAwQFBgcICQoLDA0ODxAREhMUFRYXGBkaGxwdHh8="}},
+				Webhook: &Webhook{"http://127.0.0.1:8080/hook", Secret{"whsec_AAECAwQFBgcICQoLDA0ODxAREhMUFRYXGBkaGxwdHh8="}, []netip.Prefix{netip.MustParsePrefix("10.1.0.0/16"), netip.MustParsePrefix("fd12:3456::/32")}},
 			},
 		},
 	}
-	if diff := cmp.Diff(want, got, secrets, cmpopts.EquateNaNs()); diff != "" {
+	if diff := cmp.Diff(want, got, secrets, unplacedSettings, cmpopts.EquateNaNs(), cmpopts.EquateComparable(netip.Prefix{})); diff != "" {
 		t.Errorf("-want +got:\n%s", diff)
 	}
 	for _, c := range []struct {
@@ -89,10 +93,10 @@ func TestDefaults(t *testing.T) {
 			FeedSilent: FeedSilent{3, 10},
 		},
 	}
-	if diff := cmp.Diff(want, got, secrets); diff != "" {
+	if diff := cmp.Diff(want, got, secrets, unplacedSettings); diff != "" {
 		t.Errorf("-want +got:\n%s", diff)
 	}
-	if diff := cmp.Diff(want, Default("testdata"), secrets, cmpopts.IgnoreFields(Config{}, "File")); diff != "" {
+	if diff := cmp.Diff(want, Default("testdata"), secrets, unplacedSettings, cmpopts.IgnoreFields(Config{}, "File")); diff != "" {
 		t.Errorf("Default -want +got:\n%s", diff)
 	}
 }
@@ -208,14 +212,95 @@ func TestTogether(t *testing.T) {
 	if p := Together(c, r); p != nil {
 		t.Errorf("%v, want none", p)
 	}
-	c.Feeds, c.Limits[1].Source, c.Destinations[0].Groups = nil, "gauge-9", []string{"Uper Alder"}
+	if r.Source("gauge-1").Feed != "loggers" {
+		t.Fatal("gauge-1 does not come by the feed loggers")
+	}
+	c, err = parse("testdata/crossed.yaml", []byte(`destinations:
+  - name: forester
+    mail: {server: "127.0.0.1:25", from: a@example.org, to: b@example.org, tls: none}
+    groups: [Upper Alder,
+             Uper Alder]
+  - name: warden
+    mail: {server: "127.0.0.1:25", from: a@example.org, to: b@example.org, tls: none}
+    groups: Ridge
+limits:
+  gauge-9:
+    precipitation: {high: 120}
+    air_temperature: {high: 45}
+`), "")
+	if err != nil {
+		t.Fatal(err)
+	}
 	want := strings.Join([]string{
-		`testdata/alder.good.geojson:45: source gauge-1: feed: no feed "loggers" in testdata/alder.good.yaml; add it under feeds there, or correct the name`,
-		`testdata/alder.good.yaml: limits.gauge-9: no such source in testdata/alder.good.geojson; correct the name, or remove it`,
-		`testdata/alder.good.yaml: destination forester: groups: no stand in testdata/alder.good.geojson is in group "Uper Alder"; did you mean "Upper Alder"?`,
+		`testdata/alder.good.geojson:45: source gauge-1: feed: no feed "loggers" in testdata/crossed.yaml; add it under feeds there, or correct the name`,
+		`testdata/crossed.yaml:5:14: destination forester: group Uper Alder: no stand in testdata/alder.good.geojson is in it; did you mean "Upper Alder"?`,
+		`testdata/crossed.yaml:8:13: destination warden: group Ridge: no stand in testdata/alder.good.geojson is in it; known here: Lower Alder, Upper Alder`,
+		`testdata/crossed.yaml:10:3: limits.gauge-9: no such source in testdata/alder.good.geojson; correct the name, or remove it`,
 	}, "\n")
 	if diff := cmp.Diff(want, Together(c, r).Error()); diff != "" {
 		t.Errorf("-want +got:\n%s", diff)
+	}
+}
+
+// TestLoadBoth: the mistakes of both files are told at once, unless it is not
+// known which stands file is meant.
+func TestLoadBoth(t *testing.T) {
+	t.Setenv("CREDENTIALS_DIRECTORY", "")
+	c, r, err := LoadBoth("testdata/alder.good.yaml")
+	if err != nil || c.Place != "Alder Hollow" || len(r.Stands) == 0 {
+		t.Fatalf("%+v, %v", c, err)
+	}
+	dir := t.TempDir()
+	for name, text := range map[string]string{
+		"bad.geojson":    `{"type": "FeatureCollection", "features": [{"type": "Feature", "id": "North", "geometry": null, "properties": {}}]}`,
+		"stands.geojson": `{"type": "FeatureCollection"}`,
+	} {
+		if err := os.WriteFile(filepath.Join(dir, name), []byte(text), 0o600); err != nil {
+			t.Fatal(err)
+		}
+	}
+	for name, test := range map[string]struct {
+		text      string
+		says, not []string
+	}{
+		"both":      {"stands: bad.geojson\nplase: Corrow\n", []string{"both.yaml:2:1: plase", "bad.geojson:1", `"North"`, "geometry"}, nil},
+		"default":   {"plase: Corrow\n", []string{"default.yaml:1:1: plase", "stands.geojson:1", "features"}, nil},
+		"only-one":  {"stands: bad.geojson\n", []string{"bad.geojson:1"}, []string{"only-one.yaml:"}},
+		"absent":    {"stands: absent.geojson\nplase: Corrow\n", []string{"absent.yaml:2:1: plase", "absent.geojson"}, nil},
+		"not-text":  {"stands: 12\n", []string{"not-text.yaml:1:9: stands"}, []string{"stands.geojson:"}},
+		"not-yaml":  {"stands: [bad.geojson\n", []string{"not-yaml.yaml:1", "not YAML"}, []string{"geojson:"}},
+		"not-there": {"", []string{"not-there.yaml"}, []string{"geojson"}},
+	} {
+		file := filepath.Join(dir, name+".yaml")
+		if name != "not-there" {
+			if err := os.WriteFile(file, []byte(test.text), 0o600); err != nil {
+				t.Fatal(err)
+			}
+		}
+		c, r, err := LoadBoth(file)
+		if err == nil || c != nil || r != nil {
+			t.Errorf("%s: no error", name)
+			continue
+		}
+		for _, s := range test.says {
+			if !strings.Contains(err.Error(), s) {
+				t.Errorf("%s does not say %q:\n%v", name, s, err)
+			}
+		}
+		for _, s := range test.not {
+			if strings.Contains(err.Error(), s) {
+				t.Errorf("%s says %q:\n%v", name, s, err)
+			}
+		}
+	}
+	// The default's name is a guess when the settings are wrong: its absence is
+	// no second mistake.
+	lone := filepath.Join(t.TempDir(), "lone.yaml")
+	if err := os.WriteFile(lone, []byte("stnds: mine.geojson\n"), 0o600); err != nil {
+		t.Fatal(err)
+	}
+	if _, _, err := LoadBoth(lone); err == nil || strings.Contains(err.Error(), "stands.geojson") || !strings.Contains(err.Error(), `"stands"`) {
+		t.Errorf("%v", err)
 	}
 }
 
@@ -232,7 +317,7 @@ func TestStarter(t *testing.T) {
 		t.Errorf("%+v", c)
 	}
 	want := Default("testdata")
-	if diff := cmp.Diff(want, c, secrets, cmpopts.IgnoreFields(Config{}, "File", "Stands", "Feeds")); diff != "" {
+	if diff := cmp.Diff(want, c, secrets, unplacedSettings, cmpopts.IgnoreFields(Config{}, "File", "Stands", "Feeds")); diff != "" {
 		t.Errorf("the starter changes a default -want +got:\n%s", diff)
 	}
 

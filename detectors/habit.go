@@ -1,10 +1,6 @@
 package detectors
 
-import (
-	"time"
-
-	"saprolite/ingest/quantity"
-)
+import "saprolite/ingest/quantity"
 
 // habit is what a stand has used of late and in each month of the year. It
 // stands in on days on which nothing has come to make evapotranspiration of:
@@ -25,8 +21,8 @@ const (
 	monthIsKnown = 20 // days before Month is used (methods A.1, weight of the monthly ratio)
 )
 
-// remember takes in a known day: measured evapotranspiration, or demand.
-func (h *habit) remember(month time.Month, v quantity.Millimetres, measured bool) {
+// remember takes in a known day of a month, 1 to 12: measured evapotranspiration, or demand.
+func (h *habit) remember(month int, v quantity.Millimetres, measured bool) {
 	x, n := float64(max(0, v)), &h.Days[month-1]
 	if h.Days == ([12]uint8{}) {
 		h.Recent = x
@@ -40,7 +36,7 @@ func (h *habit) remember(month time.Month, v quantity.Millimetres, measured bool
 
 // of is what the stand usually uses on a day of the month: its mean once it
 // is known, before that the mean of the last days. False before any day.
-func (h *habit) of(month time.Month) (quantity.Millimetres, bool) {
+func (h *habit) of(month int) (quantity.Millimetres, bool) {
 	if h.Days[month-1] >= monthIsKnown {
 		return quantity.Millimetres(h.Month[month-1]), true
 	}

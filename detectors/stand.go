@@ -77,7 +77,8 @@ func (s *Stand) Step(in *Inputs) {
 	a.ReferenceET, a.Basis.Reference = climate.Reference(&s.opts.Site, &in.Weather)
 	a.Basis.Measured = known(in.ActualET)
 	hasRain, hasET := known(in.Precipitation), a.Basis.Measured || known(a.ReferenceET)
-	_, month, _ := st.Day.Date()
+	_, calendarMonth, _ := st.Day.Date()
+	month := int(calendarMonth)
 	usual, ok := st.Usual.of(month)
 	a.Basis.Usual = !hasET && ok
 	a.Still = !hasRain || !hasET && !a.Basis.Usual

@@ -129,15 +129,18 @@ var privateNetworks = []netip.Prefix{
 // is private as a whole.
 func privateNetwork(s string) (string, string) {
 	const cure = `write the receiver's network, such as "10.1.0.0/16"`
-	if ip, err := netip.ParseAddr(s); err == nil && ip.Zone() == "" {
-		return fmt.Sprintf("%q is an address, want a network", clip(s)), fmt.Sprintf("for this address alone write %q", netip.PrefixFrom(ip, ip.BitLen()))
-	}
 	p, err := netip.ParsePrefix(s)
+	ip, addressErr := netip.ParseAddr(s)
+	if addressErr == nil && ip.Zone() == "" {
+		p, err = netip.PrefixFrom(ip, ip.BitLen()), nil
+	}
 	switch {
 	case err != nil:
 		return fmt.Sprintf("%q is not a network", clip(s)), cure
 	case !slices.ContainsFunc(privateNetworks, func(n netip.Prefix) bool { return n.Bits() <= p.Bits() && n.Contains(p.Addr()) }):
-		return fmt.Sprintf("%q is not a private network, which lies within 10.0.0.0/8, 172.16.0.0/12, 192.168.0.0/16, 100.64.0.0/10 or fc00::/7", s), "remove it; public addresses are reached without, this machine by http://127.0.0.1 or localhost"
+		return fmt.Sprintf("%q is not private, which is within 10.0.0.0/8, 172.16.0.0/12, 192.168.0.0/16, 100.64.0.0/10 or fc00::/7", clip(s)), "remove it; public addresses need no entry, and this machine is reached by 127.0.0.1, [::1] or localhost in the url"
+	case addressErr == nil:
+		return fmt.Sprintf("%q is an address, want a network", s), fmt.Sprintf("for this address alone write %q", p)
 	case p != p.Masked():
 		return fmt.Sprintf("%q names an address within the network", s), fmt.Sprintf("write %q", p.Masked())
 	}

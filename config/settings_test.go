@@ -234,7 +234,7 @@ limits:
 	want := strings.Join([]string{
 		`testdata/alder.good.geojson:45: source gauge-1: feed: no feed "loggers" in testdata/crossed.yaml; add it under feeds there, or correct the name`,
 		`testdata/crossed.yaml:5:14: destination forester: group Uper Alder: no stand in testdata/alder.good.geojson is in it; did you mean "Upper Alder"?`,
-		`testdata/crossed.yaml:8:13: destination warden: group Ridge: no stand in testdata/alder.good.geojson is in it; known here: Lower Alder, Upper Alder`,
+		`testdata/crossed.yaml:8:13: destination warden: group Ridge: no stand in testdata/alder.good.geojson is in it; known here: Upper Alder, ridge road`,
 		`testdata/crossed.yaml:10:3: limits.gauge-9: no such source in testdata/alder.good.geojson; correct the name, or remove it`,
 	}, "\n")
 	if diff := cmp.Diff(want, Together(c, r).Error()); diff != "" {

@@ -182,8 +182,9 @@ func newView(m alerts.Message, place string) view {
 		}
 		v.Evidence = append(v.Evidence, r)
 	}
-	if !v.Ended { // an end has nothing to look at and no end of its own, and what it was held against is past
-		v.FieldCheck, v.EndsWhen = oneLine(m.FieldCheck), oneLine(m.EndsWhen)
+	v.FieldCheck = oneLine(m.FieldCheck)
+	if !v.Ended { // an end has no end of its own, and what it was held against is past
+		v.EndsWhen = oneLine(m.EndsWhen)
 		if v.Basis != "" || m.Threshold.Value.Known() {
 			v.Threshold = number(m.Threshold.Value, m.Threshold.Unit)
 		}

@@ -77,6 +77,7 @@ func end(t testing.TB) alerts.Message {
 	m.Evidence[0].Value, m.Evidence[0].Low, m.Evidence[0].High = 61.4, 48.2, 75
 	m.Evidence[2].Value = 0.571
 	m.EndsWhen = "It has ended."
+	m.FieldCheck = "What a dry spell does can show late: dead tops, thin crowns, bark beetles in the next season."
 	return m
 }
 

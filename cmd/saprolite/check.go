@@ -2,11 +2,15 @@ package main
 
 import (
 	"fmt"
+	"io"
 	"math"
+	"net/url"
+	"strings"
 
 	"github.com/spf13/cobra"
 
 	"saprolite/config"
+	"saprolite/detectors/ledger"
 )
 
 func newCheck() *cobra.Command {
@@ -65,7 +69,69 @@ func sayCheck(cmd *cobra.Command, cfg *config.Config, reg *config.Register) {
 		case d.Mail != nil:
 			fmt.Fprintf(out, "  destination   %s: mail through %s to %d\n", d.Name, d.Mail.Server, len(d.Mail.To))
 		case d.Webhook != nil:
-			fmt.Fprintf(out, "  destination   %s: webhook %s\n", d.Name, d.Webhook.URL)
+			fmt.Fprintf(out, "  destination   %s: webhook at %s\n", d.Name, host(d.Webhook.URL))
 		}
 	}
+	sayUnused(out, reg)
+}
+
+// unused are the properties of the register that are read and checked, but of
+// which this version makes nothing.
+var unused = []struct {
+	name  string
+	given func(*config.Stand) bool
+}{
+	{"interception_share", func(s *config.Stand) bool { return !math.IsNaN(s.InterceptionShare) }},
+	{"species", func(s *config.Stand) bool { return len(s.Species) > 0 }},
+	{"canopy_cover", func(s *config.Stand) bool { return !math.IsNaN(s.CanopyCover) }},
+	{"priority", func(s *config.Stand) bool { return s.Priority != 0 }},
+	{"turgor_loss_mpa", func(s *config.Stand) bool { return !math.IsNaN(float64(s.TurgorLoss)) }},
+	{"p50_mpa", func(s *config.Stand) bool { return !math.IsNaN(float64(s.P50)) }},
+	{"p88_mpa", func(s *config.Stand) bool { return !math.IsNaN(float64(s.P88)) }},
+}
+
+// sayUnused says which properties were given for nothing, so that nobody takes
+// them to be in the account.
+func sayUnused(out io.Writer, reg *config.Register) {
+	var list []string
+	say := func(name string, n int, of string) {
+		switch {
+		case n == 1:
+			list = append(list, fmt.Sprintf("%s (1 %s)", name, of))
+		case n > 1:
+			list = append(list, fmt.Sprintf("%s (%d %ss)", name, n, of))
+		}
+	}
+	for _, p := range unused {
+		n := 0
+		for i := range reg.Stands {
+			if p.given(&reg.Stands[i]) {
+				n++
+			}
+		}
+		say(p.name, n, "stand")
+	}
+	late := 0
+	for _, s := range reg.Positioned {
+		if s.Latency != 0 {
+			late++
+		}
+	}
+	say("latency", late, "source")
+	if len(list) == 0 {
+		return
+	}
+	fmt.Fprintf(out, "\nread and checked, not used in this version: %s\n", strings.Join(list, ", "))
+	if strings.HasPrefix(list[0], "interception_share ") {
+		fmt.Fprintf(out, "warning: the account is computed without interception_share; what the canopy keeps of the rain is set by interception_store_mm, %v where it is not given\n", ledger.DefaultCanopyStore)
+	}
+}
+
+// host is the part of a webhook's address that holds no secret.
+func host(address string) string {
+	u, err := url.Parse(address)
+	if err != nil {
+		return "an address"
+	}
+	return u.Host
 }

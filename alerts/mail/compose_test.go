@@ -285,7 +285,7 @@ func TestExerciseAndEndAreMarked(t *testing.T) {
 		t.Errorf("an end does not say from when to when:\n%s", text)
 	}
 	for part, s := range map[string]string{"text": text, "HTML": html} {
-		for _, past := range []string{"What to look at", "What ends it", "hreshold", "129 mm", "nearly spent: less than", "Evidence"} {
+		for _, past := range []string{"What ends it", "hreshold", "129 mm", "nearly spent: less than", "Evidence"} {
 			if strings.Contains(s, past) {
 				t.Errorf("the %s of an end says %q, which is past", part, past)
 			}

@@ -44,6 +44,7 @@ func destination(cfg *config.Config, c config.Destination) (alerts.Destination, 
 	}
 	dest, err := webhook.New(webhook.Options{
 		Name: c.Name, URL: c.Webhook.URL, Secret: c.Webhook.Secret.Reveal(), Source: "/saprolite/" + url.PathEscape(cfg.Place),
+		AllowPrivate: c.Webhook.AllowPrivate,
 	})
 	return dest, alerts.WebhookSchedule(), err
 }

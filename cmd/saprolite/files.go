@@ -1,8 +1,6 @@
 package main
 
 import (
-	"errors"
-
 	"github.com/spf13/cobra"
 
 	"saprolite/config"
@@ -13,19 +11,10 @@ func configFlag(c *cobra.Command, file *string) {
 	c.Flags().StringVar(file, "config", "saprolite.yaml", "settings file; it names the stands file and the data folder")
 }
 
-// readBoth reads saprolite.yaml and the stands file it names, and says all
-// that is wrong with either.
+// readBoth reads saprolite.yaml and the stands file it names. Whatever is wrong
+// with either, or with the two together, is one error and a matter of
+// configuration.
 func readBoth(configFile string) (*config.Config, *config.Register, error) {
-	cfg, err := config.Load(configFile)
-	if err != nil {
-		return nil, nil, exitWith(exitConfiguration, err)
-	}
-	reg, err := config.LoadRegister(cfg.Stands)
-	if err != nil {
-		return nil, nil, exitWith(exitConfiguration, err)
-	}
-	if problems := config.Together(cfg, reg); len(problems) > 0 {
-		return nil, nil, exitWith(exitConfiguration, errors.Join(problems))
-	}
-	return cfg, reg, nil
+	cfg, reg, err := config.LoadBoth(configFile)
+	return cfg, reg, exitWith(exitConfiguration, err)
 }

@@ -73,6 +73,9 @@ func runHindcast(cmd *cobra.Command, f hindcastFlags) error {
 	if err != nil {
 		return exitWith(exitConfiguration, err)
 	}
+	if problems := config.Together(cfg, reg); f.config != "" && len(problems) > 0 {
+		return exitWith(exitConfiguration, problems)
+	}
 	opts := engineSetup(cfg, reg)
 	opts.Record = &alerts.Memory{}
 	opts.Until = to

@@ -44,7 +44,7 @@ func runInit(cmd *cobra.Command, stands, file string) error {
 	err = writeNew(file, config.Starter(reg, relative(file, stands)))
 	switch {
 	case errors.Is(err, fs.ErrExist):
-		fmt.Fprintf(out, "%s is there already and was left as it is.\n\n", file)
+		fmt.Fprintf(out, "%s is there already and was left as it was.\n\n", file)
 	case err != nil:
 		return exitWith(exitConfiguration, fmt.Errorf("write %s: %w", file, err))
 	default:

@@ -5,7 +5,6 @@ import (
 	"encoding/json"
 	"errors"
 	"fmt"
-	"strconv"
 	"time"
 
 	"github.com/rs/zerolog"
@@ -64,8 +63,59 @@ func newKeeper(ctx context.Context, cfg *config.Config, reg *config.Register, b 
 	if k.engine, err = engine.New(opts); err != nil {
 		return nil, err
 	}
-	k.cursor, k.cursorRev, _, err = books.Get(ctx, engine.CursorKey)
-	return k, err
+	if k.cursor, k.cursorRev, _, err = books.Get(ctx, engine.CursorKey); err != nil {
+		return nil, err
+	}
+	return k, k.meet(ctx)
+}
+
+// meet holds the books against the stream that is there, before anything is
+// published to it: an older copy that was put back may soon be longer again.
+func (k *keeper) meet(ctx context.Context) error {
+	state, err := k.broker.State(ctx, broker.Observations)
+	if err != nil {
+		return err
+	}
+	switch {
+	case !state.Created.Equal(k.engine.Stream()):
+		return k.restart(ctx, state.Created, broker.Replaced)
+	case state.Last < k.engine.Cursor():
+		return k.restart(ctx, state.Created, broker.Regressed)
+	}
+	return nil
+}
+
+// restart takes the stream in from its beginning. Repeating what is in the
+// books changes nothing, and what was told is in ALERTS.
+func (k *keeper) restart(ctx context.Context, created time.Time, why broker.GapReason) error {
+	cursor := k.engine.Cursor()
+	k.engine.Restart(created)
+	if cursor == 0 {
+		return nil // nothing was read: the books are new
+	}
+	what := "OBSERVATIONS is not the stream that the books were made from"
+	if why == broker.Regressed {
+		what = "OBSERVATIONS ends before what the books have read: an older copy of it was put back"
+	}
+	k.log.Error().Uint64("read_up_to", cursor).Time("created", created).Msg(what +
+		". It is taken in again from its beginning; accounts and values in the books stay, and nothing is told twice." +
+		" What the old stream held and the books do not is lost: where days are missing, send or load them again")
+	k.since++ // so that the cursor is written whatever else has changed
+	return k.save(ctx)
+}
+
+// missing takes note of messages of OBSERVATIONS that will not come.
+func (k *keeper) missing(ctx context.Context, gap *broker.Gap) error {
+	if gap.Reason == broker.Removed {
+		k.log.Error().Uint64("from", gap.From).Uint64("to", gap.To).Msg(
+			"messages were removed from OBSERVATIONS before they could be read; unless they were in the books before, their days are missing: send or load them again")
+		return nil
+	}
+	state, err := k.broker.State(ctx, broker.Observations)
+	if err != nil {
+		return err
+	}
+	return k.restart(ctx, state.Created, gap.Reason)
 }
 
 // handle takes in one message of OBSERVATIONS and keeps what cannot be used
@@ -82,7 +132,9 @@ func (k *keeper) handle(ctx context.Context, m broker.Msg) ([]alerts.Message, er
 		if err != nil {
 			return out.Told, fmt.Errorf("hold part of message %d: %w", m.Seq, err)
 		}
-		id := "held-" + strconv.FormatUint(m.Seq, 10) + "-" + strconv.Itoa(i)
+		// The time tells it from the message that had this number in a stream
+		// that has been replaced.
+		id := fmt.Sprintf("held-%d-%d-%d", m.Seq, m.Stored.UnixNano(), i)
 		if _, err := k.broker.Publish(ctx, h.Subject(), map[string]string{broker.IDHeader: id}, data); err != nil {
 			return out.Told, fmt.Errorf("hold part of message %d: %w", m.Seq, err)
 		}
@@ -157,6 +209,9 @@ func (k *keeper) tidy(ctx context.Context) error {
 		return fmt.Errorf("tidy observations: %w", err)
 	}
 	if state.MaxBytes <= 0 || float64(state.Bytes) < above*float64(state.MaxBytes) {
+		return nil
+	}
+	if k.engine.Cursor() <= state.First { // nothing that is there has been read yet
 		return nil
 	}
 	middle := state.First + (k.engine.Cursor()-state.First)/2

@@ -56,6 +56,11 @@ func runLoad(cmd *cobra.Command, configFile string, files []string) error {
 		return err
 	}
 	defer b.Close(context.WithoutCancel(ctx))
+	if !b.Attached() {
+		if err := firstTick(ctx, b); err != nil {
+			return err
+		}
+	}
 	l := &loading{reg: reg, to: b, errs: cmd.ErrOrStderr(), packs: map[string]*pack{}}
 	if err := l.load(ctx, cmd, files); err != nil {
 		return err
@@ -214,10 +219,26 @@ func (l *loading) send(batches *broker.Loader, id string, p *pack) error {
 	return nil
 }
 
+// firstTick lets the time of now into a store whose books are still empty. A
+// store with a past has a clock, and so has a running daemon; without one a row
+// that is dated years ahead would be taken as good.
+func firstTick(ctx context.Context, b *broker.Broker) error {
+	books, err := b.Books(ctx)
+	if err != nil {
+		return err
+	}
+	_, _, begun, err := books.Get(ctx, engine.CursorKey)
+	if err != nil || begun {
+		return err
+	}
+	_, err = b.Publish(ctx, engine.TickSubject, nil, engine.EncodeTick(time.Now()))
+	return err
+}
+
 // settleNow settles what has been stored, in a store that this command owns:
 // a tick of now, everything up to it taken in, the books saved.
 func settleNow(ctx context.Context, cmd *cobra.Command, cfg *config.Config, reg *config.Register, b *broker.Broker) error {
-	k, err := newKeeper(ctx, cfg, reg, b, zerolog.Nop())
+	k, err := newKeeper(ctx, cfg, reg, b, newLog(cmd.ErrOrStderr(), zerolog.WarnLevel))
 	if err != nil {
 		return err
 	}
@@ -226,19 +247,9 @@ func settleNow(ctx context.Context, cmd *cobra.Command, cfg *config.Config, reg 
 		return err
 	}
 	bar := progress(cmd, int64(last-k.engine.Cursor()), "packs")
-	done := errors.New("done")
-	err = b.Follow(ctx, broker.Following{Stream: broker.Observations, After: k.engine.Cursor(), Each: func(m broker.Msg) error {
-		if _, err := k.handle(ctx, m); err != nil {
-			return err
-		}
-		bar.Add(1)
-		if m.Seq >= last {
-			return done
-		}
-		return nil
-	}})
+	err = takeUpTo(ctx, k, last, func() { bar.Add(1) })
 	bar.Finish()
-	if !errors.Is(err, done) {
+	if err != nil {
 		return err
 	}
 	if err := k.save(ctx); err != nil {
@@ -251,4 +262,44 @@ func settleNow(ctx context.Context, cmd *cobra.Command, cfg *config.Config, reg 
 	}
 	fmt.Fprintln(cmd.OutOrStdout())
 	return nil
+}
+
+// takeUpTo takes in the stream up to and with message last.
+func takeUpTo(ctx context.Context, k *keeper, last uint64, each func()) error {
+	ctx, cancel := context.WithCancelCause(ctx)
+	defer cancel(nil)
+	done := errors.New("done")
+	err := k.broker.Follow(ctx, broker.Following{
+		Stream: broker.Observations, After: k.engine.Cursor(), Created: k.engine.Stream(),
+		Each: func(m broker.Msg) error {
+			if _, err := k.handle(ctx, m); err != nil {
+				return err
+			}
+			each()
+			if m.Seq >= last {
+				return done
+			}
+			return nil
+		},
+		Notice: func(err error) {
+			gap, missing := errors.AsType[*broker.Gap](err)
+			switch {
+			case !missing:
+				k.log.Warn().Err(err).Msg("observations cannot be read; trying again")
+			case gap.Reason == broker.Removed:
+				if err := k.missing(ctx, gap); err != nil {
+					cancel(err)
+				}
+			default: // last means another message now
+				cancel(exitWith(exitTemporary, fmt.Errorf("load: %w; load again", err)))
+			}
+		},
+	})
+	if errors.Is(err, done) {
+		return nil
+	}
+	if cause := context.Cause(ctx); cause != nil {
+		return cause
+	}
+	return err
 }

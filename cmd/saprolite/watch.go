@@ -31,32 +31,62 @@ type watch struct {
 	started  time.Time
 
 	seen     atomic.Pointer[sight]
-	lookedAt atomic.Int64 // Unix nanoseconds of the last look
-	caught   atomic.Bool  // the loop has once been at the stream's end
+	turnedAt atomic.Int64          // Unix nanoseconds of the loop's last turn
+	cursor   atomic.Uint64         // the last message the loop has taken in
+	caught   atomic.Bool           // the loop has once been at the stream's end
+	failed   atomic.Pointer[error] // of the clock's last write; nil: it was stored
 
 	mu       sync.Mutex
-	changed  chan struct{} // closed at each look, and replaced
+	taken    chan struct{} // closed when a message is taken in; nil: nobody waits
 	listener net.Addr
 }
 
 // sight is what the loop saw of the engine.
 type sight struct {
 	metrics.Snapshot
-	cursor uint64
-	stores []string // a line a stand
+	stores []string // a line a stand, for the demo
 }
 
 func newWatch(d *daemon) *watch {
-	w := &watch{daemon: d, started: time.Now(), changed: make(chan struct{})}
+	w := &watch{daemon: d, started: time.Now()}
+	w.cursor.Store(d.keeper.engine.Cursor())
+	w.turned()
 	w.look()
 	return w
 }
 
-// look is called by the loop.
+// turned is called by the loop at each of its turns.
+func (w *watch) turned() { w.turnedAt.Store(time.Now().UnixNano()) }
+
+// took is called by the loop when it has taken in a message.
+func (w *watch) took(cursor uint64) {
+	w.cursor.Store(cursor)
+	w.mu.Lock()
+	defer w.mu.Unlock()
+	if w.taken != nil {
+		close(w.taken)
+		w.taken = nil
+	}
+}
+
+// wrote is called by the clock after each write, and returns the error of the
+// one before.
+func (w *watch) wrote(err error) (before error) {
+	var now *error
+	if err != nil {
+		now = &err
+	}
+	if old := w.failed.Swap(now); old != nil {
+		return *old
+	}
+	return nil
+}
+
+// look is called by the loop when time has moved on, and after each save.
 func (w *watch) look() {
 	k := w.daemon.keeper
 	c := k.engine.Counts()
-	s := &sight{cursor: k.engine.Cursor()}
+	s := &sight{}
 	s.Snapshot = metrics.Snapshot{
 		Stands: map[finding.Level]int{}, Observations: c.Observations, Held: c.Held, LastTick: k.engine.Now(),
 		Told: map[finding.Kind]uint64{}, BookSaves: k.saves, BookSaveTook: k.saveTook,
@@ -78,15 +108,12 @@ func (w *watch) look() {
 			level = v.Account.Level()
 		}
 		s.Stands[level]++
-		s.stores = append(s.stores, storeLine(v, level))
+		if w.daemon.invented {
+			s.stores = append(s.stores, storeLine(v, level))
+		}
 	}
 	s.Deficit, s.Used = metrics.SpreadOf(deficits), metrics.SpreadOf(used)
 	w.seen.Store(s)
-	w.lookedAt.Store(time.Now().UnixNano())
-	w.mu.Lock()
-	defer w.mu.Unlock()
-	close(w.changed)
-	w.changed = make(chan struct{})
 }
 
 // storeLine is one line on one stand's store.
@@ -109,6 +136,7 @@ func storeLine(v engine.View, level finding.Level) string {
 // caughtUp is called by the loop when it has been at the stream's end.
 func (w *watch) caughtUp() {
 	if !w.caught.Swap(true) {
+		w.look()
 		w.daemon.log.Info().Dur("after_ms", time.Since(w.started)).Msg("ready")
 	}
 }
@@ -125,8 +153,8 @@ func (w *watch) read() metrics.Snapshot {
 			continue // a scrape shows what there is; /readyz says what is wrong
 		}
 		s.StreamBytes[stream] = state.Bytes
-		if stream == broker.Observations && state.Last > w.seen.Load().cursor {
-			s.CursorLag = state.Last - w.seen.Load().cursor
+		if cursor := w.cursor.Load(); stream == broker.Observations && state.Last > cursor {
+			s.CursorLag = state.Last - cursor
 		}
 	}
 	for _, c := range w.couriers {
@@ -138,12 +166,12 @@ func (w *watch) read() metrics.Snapshot {
 	return s
 }
 
-// stuckAfter is how long the loop may be silent: it looks every half minute
-// at the least, and a large load or re-settling may keep it for some.
+// stuckAfter is how long the loop may be silent: it turns every few seconds
+// at the least, and a large load or re-settling may keep it for some minutes.
 const stuckAfter = 5 * time.Minute
 
 func (w *watch) alive() error {
-	if quiet := time.Since(time.Unix(0, w.lookedAt.Load())); quiet > stuckAfter {
+	if quiet := time.Since(time.Unix(0, w.turnedAt.Load())); quiet > stuckAfter {
 		return fmt.Errorf("the loop has not turned for %s", quiet.Round(time.Second))
 	}
 	return nil
@@ -156,6 +184,9 @@ func (w *watch) ready() metrics.Readiness {
 	}
 	if !w.caught.Load() {
 		r.Unready = append(r.Unready, "still taking in what was stored before")
+	}
+	if err := w.failed.Load(); err != nil {
+		r.Unready = append(r.Unready, "the last tick could not be stored: "+(*err).Error())
 	}
 	ctx, cancel := context.WithTimeout(context.Background(), 2*time.Second)
 	defer cancel()
@@ -172,10 +203,18 @@ func (w *watch) ready() metrics.Readiness {
 	return r
 }
 
+// handler answers /metrics, /healthz and /readyz.
+func (w *watch) handler() (http.Handler, error) {
+	reg := prometheus.NewRegistry()
+	if _, err := metrics.New(reg, metrics.Options{Build: build(), Start: w.started, Read: w.read}); err != nil {
+		return nil, err
+	}
+	return metrics.Handler(reg, metrics.Checks{Alive: w.alive, Ready: w.ready}), nil
+}
+
 // serve is the actor that answers.
 func (w *watch) serve(ctx context.Context) error {
-	reg := prometheus.NewRegistry()
-	_, err := metrics.New(reg, metrics.Options{Build: build(), Start: w.started, Read: w.read})
+	handler, err := w.handler()
 	if err != nil {
 		return err
 	}
@@ -187,7 +226,7 @@ func (w *watch) serve(ctx context.Context) error {
 	w.listener = l.Addr()
 	w.mu.Unlock()
 	w.daemon.log.Info().Str("address", l.Addr().String()).Msg("serving /metrics, /healthz and /readyz")
-	server := metrics.Server(metrics.Handler(reg, metrics.Checks{Alive: w.alive, Ready: w.ready}))
+	server := metrics.Server(handler)
 	ended := make(chan error, 1)
 	go func() { ended <- server.Serve(l) }()
 	select {
@@ -198,6 +237,9 @@ func (w *watch) serve(ctx context.Context) error {
 	stop, cancel := context.WithTimeout(context.Background(), 5*time.Second)
 	defer cancel()
 	err = server.Shutdown(stop)
+	if errors.Is(err, context.DeadlineExceeded) {
+		err = server.Close() // a client that does not go is no failure of the daemon
+	}
 	if e := <-ended; !errors.Is(e, http.ErrServerClosed) {
 		err = errors.Join(err, e)
 	}
@@ -230,13 +272,16 @@ func (w *watch) address() string {
 func (w *watch) waitFor(ctx context.Context, seq uint64) error {
 	for {
 		w.mu.Lock()
-		changed := w.changed
+		if w.taken == nil {
+			w.taken = make(chan struct{})
+		}
+		taken := w.taken
 		w.mu.Unlock()
-		if w.seen.Load().cursor >= seq {
+		if w.cursor.Load() >= seq {
 			return nil
 		}
 		select {
-		case <-changed:
+		case <-taken:
 		case <-ctx.Done():
 			return ctx.Err()
 		case <-time.After(time.Minute):

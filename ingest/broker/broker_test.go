@@ -14,6 +14,7 @@ import (
 	"testing"
 	"time"
 
+	"github.com/nats-io/nats.go/jetstream"
 	"github.com/rs/zerolog"
 )
 
@@ -240,4 +241,33 @@ func (s *syncBuffer) String() string {
 	s.mu.Lock()
 	defer s.mu.Unlock()
 	return s.b.String()
+}
+
+// Strict is worth its name: the server syncs before each acknowledgement, in
+// every stream. Without that a power cut takes what was acknowledged, and
+// nothing else here would notice.
+func TestStrictSyncsBeforeItAcknowledges(t *testing.T) {
+	for d, want := range map[Durability]bool{Strict: true, Relaxed: false} {
+		o := small(t)
+		o.Durability = d
+		b := open(t, o)
+		if got := b.server.JetStreamConfig().SyncAlways; got != want {
+			t.Errorf("durability %d: the server syncs always: %v, want %v", d, got, want)
+		}
+		for _, name := range []string{Observations, Held, Alerts, BooksStream} {
+			info, err := b.info(t.Context(), name)
+			if err != nil {
+				t.Fatal(err)
+			}
+			// Asynchronous persistence would switch the syncing off again
+			// (nats-server v2.15.3, server/stream.go, setupStore).
+			if got := info.Config.PersistMode; got != jetstream.DefaultPersistMode {
+				t.Errorf("%s: persist mode %v, want the default", name, got)
+			}
+		}
+		shut(t, b)
+	}
+	if (Options{}).Durability != Strict {
+		t.Error("Strict is not the default")
+	}
 }

@@ -78,14 +78,14 @@ type last struct {
 	place   uint64
 }
 
-// NewTeller returns a teller for a place, whose name goes into the ids; its
-// messages have the status, Actual if it is "".
-func NewTeller(place string, status Status, record Record) *Teller {
-	if status == "" {
-		status = Actual
-	}
-	return &Teller{place: place, status: status, record: record, told: map[subject]last{}}
+// NewTeller returns a teller for a place, whose name goes into the ids.
+func NewTeller(place string, record Record) *Teller {
+	return &Teller{place: place, status: Actual, record: record, told: map[subject]last{}}
 }
+
+// Rehearse marks all further messages as an exercise: the forest is invented,
+// or somebody tries whether mails arrive.
+func (t *Teller) Rehearse() { t.status = Exercise }
 
 // kinds is every kind a stand can be told of.
 var kinds = [...]finding.Kind{finding.StoreLow, finding.FeedSilent}

@@ -135,13 +135,13 @@ func TestEveryEpisodeComesToTheRecordOnce(t *testing.T) {
 	rapid.Check(t, func(t *rapid.T) {
 		list, ticks := lives.Draw(t, "episodes"), days.Draw(t, "ticks")
 		var record Memory
-		teller := NewTeller("Hollin", Actual, &record)
+		teller := NewTeller("Hollin", &record)
 		before := -1
 		for _, n := range ticks {
 			w := known(list, before, n)
 			mustTell(t, teller, w)
 			sameOpen(t, &record, w)
-			for _, again := range []*Teller{teller, NewTeller("Hollin", Actual, &record)} {
+			for _, again := range []*Teller{teller, NewTeller("Hollin", &record)} {
 				if added := mustTell(t, again, w); len(added) != 0 {
 					t.Fatalf("said again: %v", lines(added))
 				}
@@ -202,7 +202,7 @@ var revised = rapid.Custom(func(t *rapid.T) (list []Wanted) {
 func TestRecordFollowsRevisedAccounts(t *testing.T) {
 	rapid.Check(t, func(t *rapid.T) {
 		var record Memory
-		teller := NewTeller("Hollin", Actual, &record)
+		teller := NewTeller("Hollin", &record)
 		for _, w := range revised.Draw(t, "wanted") {
 			mustTell(t, teller, w)
 			sameOpen(t, &record, w)
@@ -218,12 +218,12 @@ func TestReplayAfterACrashAddsNothing(t *testing.T) {
 	rapid.Check(t, func(t *rapid.T) {
 		list := revised.Draw(t, "wanted")
 		var straight Memory
-		teller := NewTeller("Hollin", Actual, &straight)
+		teller := NewTeller("Hollin", &straight)
 		for _, w := range list {
 			mustTell(t, teller, w)
 		}
 		record := &broken{Memory: &Memory{}, left: rapid.IntRange(0, len(straight.Messages)).Draw(t, "messages before the crash"), err: crashed}
-		teller = NewTeller("Hollin", Actual, record)
+		teller = NewTeller("Hollin", record)
 		at := 0
 		for ; at < len(list); at++ {
 			if _, err := teller.Tell(ashlar, list[at]); errors.Is(err, crashed) {
@@ -233,7 +233,7 @@ func TestReplayAfterACrashAddsNothing(t *testing.T) {
 			}
 		}
 		record.left = -1 // the power is back
-		teller = NewTeller("Hollin", Actual, record)
+		teller = NewTeller("Hollin", record)
 		for _, w := range list[rapid.IntRange(0, min(at, len(list)-1)).Draw(t, "replay from tick"):] {
 			mustTell(t, teller, w)
 		}

@@ -159,7 +159,7 @@ func TestTell(t *testing.T) {
 	} {
 		t.Run(c.name, func(t *testing.T) {
 			var record Memory
-			teller := NewTeller("Hollin", Actual, &record)
+			teller := NewTeller("Hollin", &record)
 			var added []Message
 			for _, w := range c.w {
 				added = append(added, mustTell(t, teller, w)...)
@@ -178,7 +178,7 @@ func TestTell(t *testing.T) {
 // What the table above cannot show of the messages.
 func TestTellCarriesTheEvidence(t *testing.T) {
 	var record Memory
-	teller := NewTeller("Hollin", Actual, &record)
+	teller := NewTeller("Hollin", &record)
 	mustTell(t, teller, closing(5, low(finding.Low, 3, 5)))
 	mustTell(t, teller, closing(9))
 	mustTell(t, teller, closing(12, low(finding.Spent, 3, 12)))
@@ -201,7 +201,7 @@ func TestTellCarriesTheEvidence(t *testing.T) {
 
 func TestKindsAreToldApart(t *testing.T) {
 	var record Memory
-	teller := NewTeller("Hollin", Actual, &record)
+	teller := NewTeller("Hollin", &record)
 	silent := low(finding.Silent, 4, 7)
 	silent.Kind, silent.Direct = finding.FeedSilent, true
 	mustTell(t, teller, closing(5, low(finding.Low, 3, 5)))
@@ -218,7 +218,7 @@ func TestKindsAreToldApart(t *testing.T) {
 // A record that somebody else has written is read again.
 func TestMovedRecordIsReadAgain(t *testing.T) {
 	var record Memory
-	first, second := NewTeller("Hollin", Actual, &record), NewTeller("Hollin", Actual, &record)
+	first, second := NewTeller("Hollin", &record), NewTeller("Hollin", &record)
 	mustTell(t, first, closing(5, low(finding.Low, 3, 5)))
 	mustTell(t, second, closing(6, low(finding.NearlySpent, 3, 6)))
 	mustTell(t, first, closing(7, low(finding.Spent, 3, 7)))
@@ -235,7 +235,7 @@ func TestMovedRecordIsReadAgain(t *testing.T) {
 // A record that moves on under every try is given up with an error.
 func TestRecordThatNeverRestsIsAnError(t *testing.T) {
 	moving := &broken{Memory: &Memory{}, err: fmt.Errorf("append: %w", ErrMoved)}
-	if _, err := NewTeller("Hollin", Actual, moving).Tell(ashlar, closing(5, low(finding.Low, 3, 5))); !errors.Is(err, ErrMoved) {
+	if _, err := NewTeller("Hollin", moving).Tell(ashlar, closing(5, low(finding.Low, 3, 5))); !errors.Is(err, ErrMoved) {
 		t.Errorf("error %v, want ErrMoved", err)
 	}
 	if moving.tries < 2 {
@@ -247,10 +247,10 @@ func TestRecordThatNeverRestsIsAnError(t *testing.T) {
 // late data by which it still holds: it is told.
 func TestHalfRecordedEpisodeThatHoldsIsTold(t *testing.T) {
 	var record Memory
-	if _, err := NewTeller("Hollin", Actual, &broken{Memory: &record, left: 1, err: errors.New("crash")}).Tell(ashlar, closing(30, passed(finding.Low, 3, 29))); err == nil {
+	if _, err := NewTeller("Hollin", &broken{Memory: &record, left: 1, err: errors.New("crash")}).Tell(ashlar, closing(30, passed(finding.Low, 3, 29))); err == nil {
 		t.Fatal("no crash")
 	}
-	mustTell(t, NewTeller("Hollin", Actual, &record), closing(30, low(finding.Low, 3, 30)))
+	mustTell(t, NewTeller("Hollin", &record), closing(30, low(finding.Low, 3, 30)))
 	want := []string{"Alert 1 low since 3 late", "Cancel 2 low since 3 late corrected on 30", "Alert 3 low since 3 told"}
 	if diff := cmp.Diff(want, lines(record.Messages)); diff != "" {
 		t.Errorf("record (-want +got):\n%s", diff)
@@ -302,7 +302,7 @@ var messageID = regexp.MustCompile(`^sap-[a-z2-7]{26}-[0-9]{4,}$`)
 // The keys of design 5.7, in its order.
 func TestMessageJSON(t *testing.T) {
 	var record Memory
-	mustTell(t, NewTeller("Hollin", Actual, &record), closing(5, low(finding.Low, 3, 5)))
+	mustTell(t, NewTeller("Hollin", &record), closing(5, low(finding.Low, 3, 5)))
 	data, err := json.Marshal(record.Messages[0])
 	if err != nil {
 		t.Fatal(err)

@@ -119,6 +119,7 @@ func runDemo(ctx context.Context, out io.Writer, dir string, fast bool) (err err
 		return err
 	}
 	s.daemon.invented = true
+	s.daemon.keeper.engine.Rehearse()
 	s.daemon.onTold = s.note
 	ended := make(chan error, 1)
 	go func() { ended <- s.daemon.run(ctx) }()

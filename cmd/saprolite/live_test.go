@@ -192,7 +192,7 @@ func TestDemo(t *testing.T) {
 	if err != nil || len(mails) == 0 {
 		t.Fatalf("%d mails, %v", len(mails), err)
 	}
-	if mail := read(t, mails[0]); !strings.Contains(mail, "Message-ID: <sap-") || !strings.Contains(mail, "dead limbs fall") {
+	if mail := read(t, mails[0]); !strings.Contains(mail, "Message-ID: <sap-") || !strings.Contains(mail, "dead limbs fall") || !strings.Contains(mail, "EXERCISE") {
 		t.Errorf("the first mail is no mail of ours:\n%s", mail)
 	}
 

@@ -14,8 +14,7 @@ import (
 
 // Options are what an engine is made of.
 type Options struct {
-	Place   string        // goes into the ids of messages
-	Status  alerts.Status // of the messages; "" is Actual
+	Place   string // goes into the ids of messages
 	Stands  []StandSetup
 	Sources []SourceSetup
 	Shelf   daybook.Shelf // nil: everything stays in memory
@@ -111,7 +110,7 @@ type Counts struct {
 func New(opts Options) (*Engine, error) {
 	e := &Engine{
 		opts:    opts,
-		teller:  alerts.NewTeller(opts.Place, opts.Status, opts.Record),
+		teller:  alerts.NewTeller(opts.Place, opts.Record),
 		sources: map[string]*source{},
 		byID:    map[string]*stand{},
 		fresh:   map[string]quantity.Day{},
@@ -146,6 +145,9 @@ func New(opts Options) (*Engine, error) {
 	}
 	return e, nil
 }
+
+// Rehearse marks all further messages as an exercise.
+func (e *Engine) Rehearse() { e.teller.Rehearse() }
 
 // Now returns the time of the last tick; zero before the first.
 func (e *Engine) Now() time.Time { return e.now }

@@ -81,7 +81,9 @@ func (s *Stand) judgeStore() {
 	// Only while the level's own condition holds: a store that is refilling
 	// is told of no more.
 	if chanceBelow(set.Left[worst], left) >= enter {
-		st.Low.Eased = false
+		if st.Low.Eased { // it holds again, without having been left
+			st.Low.Eased, st.Low.Since = false, st.Day
+		}
 		if st.Low.Unusual == "" || st.Low.Changed == st.Day {
 			st.Low.worth(s.unusual(worst), st.Day)
 		}
@@ -168,16 +170,19 @@ func (s *Stand) why(e *Episode) string {
 	case FewYears:
 		return fmt.Sprintf("What is usual here is told from %d complete years on, of which there are %d; until then the level alone decides.", yearsToJudge, n)
 	case Beyond:
-		return fmt.Sprintf("The deficit is deeper than in %d of %s at their worst.", shallower, known)
+		return fmt.Sprintf("The deficit is deeper than %d of %s reached at their worst.", shallower, known)
 	case Carried:
-		return fmt.Sprintf("The store has not refilled since the hydrological year before; of %s %d began so.", known, began)
+		return fmt.Sprintf("The store has not refilled since the dry season before: %d of %s began like this.", began, known)
 	}
 	if reached == 0 {
-		return fmt.Sprintf("This level was reached in none of %s.", known)
+		return fmt.Sprintf("None of %s came to this level.", known)
+	}
+	if e.Unusual == Seldom {
+		return fmt.Sprintf("Only %d of %s came to this level.", reached, known)
 	}
 	start := s.State.Year.Start + quantity.Day(earliest)
 	_, month, day := start.Date()
-	return fmt.Sprintf("Of %s this level was reached in %d, at the earliest about %d %s.", known, reached, day, month)
+	return fmt.Sprintf("This is early: in %d of %s the store came to this level, at the earliest about %d %s.", reached, known, day, month)
 }
 
 // depth is the deficit at which a level begins.
@@ -190,7 +195,7 @@ func (s *Stand) storeLow(e *Episode) finding.Finding {
 	a := &s.Today
 	used := fmt.Sprintf("%s used of the %s it can give, %s left.", round(a.Deficit), round(s.limit.Value), percent(s.Left()))
 	if !s.opts.configuredLimit() {
-		used = fmt.Sprintf("deficit %s, %s of the limit of %s is left.", round(a.Deficit), percent(s.Left()), round(s.limit.Value))
+		used = fmt.Sprintf("%s used of about %s, %s left.", round(a.Deficit), round(s.limit.Value), percent(s.Left()))
 	}
 	headline := fmt.Sprintf("Store %s: %s", e.Level, used)
 	reason := "At this level since " + e.Since.String()
@@ -206,7 +211,7 @@ func (s *Stand) storeLow(e *Episode) finding.Finding {
 		reason += " The deficit by measured evapotranspiration has passed the storage limit."
 	}
 	if !s.opts.configuredLimit() {
-		reason += fmt.Sprintf(" The limit is the deficit to expect once in %d years: the store may hold more.", ledger.ReturnPeriod)
+		reason += fmt.Sprintf(" About, because the limit is the deficit to expect once in %d years: the store may hold more.", ledger.ReturnPeriod)
 	}
 	return finding.Finding{
 		Stand: s.opts.ID, Kind: finding.StoreLow, Level: e.Level, Onset: e.Onset, Day: a.Day, Ended: e.Ended, Changed: e.decided(),
@@ -239,7 +244,7 @@ func (s *Stand) Evidence() []finding.Evidence {
 	list := []finding.Evidence{
 		{Name: "storage deficit", Value: tenth(a.Deficit), Low: nan, High: nan, Unit: "mm", Source: "water account, evapotranspiration " + orUnknown(a.Basis.String())},
 		{Name: "storage limit", Value: tenth(s.limit.Value), Low: tenth(s.limit.Low), High: tenth(s.limit.High), Unit: "mm", Source: s.limit.Basis},
-		{Name: "share of store left", Value: math.Round(1000*math.Max(0, s.Left())) / 1000, Low: nan, High: nan, Unit: "1", Source: "1 - deficit / limit"},
+		{Name: "left of the store", Value: math.Round(1000*math.Max(0, s.Left())) / 10, Low: nan, High: nan, Unit: "%", Source: "100 x (1 - deficit / limit)"},
 		{Name: "rain on the day", Value: tenth(a.Precipitation), Low: nan, High: nan, Unit: "mm", Source: orUnknown(a.From.Rain)},
 	}
 	if n := s.State.Unseen; n > 0 {

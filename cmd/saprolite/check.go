@@ -60,6 +60,9 @@ func sayCheck(cmd *cobra.Command, cfg *config.Config, reg *config.Register) {
 	}
 	fmt.Fprintf(out, "  stands        %d%s; %d with a storage limit of their own\n", len(reg.Stands), area, limits)
 	fmt.Fprintf(out, "  sources       %d that may speak, %d with a position\n", len(reg.SourceIDs()), len(reg.Positioned))
+	if unlisted := unlisted(reg); len(unlisted) > 0 {
+		fmt.Fprintf(out, "  not listed    %s: named by a stand, but no feature says where they are. Right?\n", strings.Join(unlisted, ", "))
+	}
 	fmt.Fprintf(out, "  data          %s\n", cfg.Data)
 	if len(cfg.Destinations) == 0 {
 		fmt.Fprintf(out, "  destinations  none: alerts are kept and shown, but nobody is written to\n")
@@ -125,6 +128,17 @@ func sayUnused(out io.Writer, reg *config.Register) {
 	if strings.HasPrefix(list[0], "interception_share ") {
 		fmt.Fprintf(out, "warning: the account is computed without interception_share; what the canopy keeps of the rain is set by interception_store_mm, %v where it is not given\n", ledger.DefaultCanopyStore)
 	}
+}
+
+// unlisted are sources that stands name and no feature lists: perhaps a slip.
+func unlisted(reg *config.Register) []string {
+	var ids []string
+	for _, id := range reg.SourceIDs() {
+		if reg.Source(id).Line == 0 && reg.Stand(id) == nil {
+			ids = append(ids, id)
+		}
+	}
+	return ids
 }
 
 // host is the part of a webhook's address that holds no secret.

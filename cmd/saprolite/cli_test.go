@@ -48,8 +48,8 @@ func TestExitCodes(t *testing.T) {
 		{[]string{"hindcast", "--stands", stands, "--history", filepath.Join(dir, "none.csv")}, exitData, []string{"none.csv"}},
 		{[]string{"hindcast", "--stands", stands, "--history", noHistory}, exitData, []string{"no usable observation"}},
 		{[]string{"hindcast", "--stands", stands, "--history", badHistory}, exitData,
-			[]string{"bad.csv: line 3", `"rain"`, "precipitation", "bad.csv:4", "nowhere", "bad.csv:5", "check unit and sign", "3 rows"}},
-		{[]string{"load", badHistory, "--config", settings}, exitData, []string{"bad.csv: line 3", "bad.csv:4", "2 rows"}},
+			[]string{"bad.csv: line 3", `"rain"`, "precipitation", "bad.csv: line 4", "nowhere", "bad.csv: line 5", "check unit and sign", "could not be used: 3"}},
+		{[]string{"load", badHistory, "--config", settings}, exitData, []string{"bad.csv: line 3", "bad.csv: line 4", "could not be used: 3"}},
 	} {
 		t.Run(strings.Join(c.args[:1], " ")+fmt.Sprint(" ", c.code), func(t *testing.T) {
 			code, out, errs := call(t, c.args...)

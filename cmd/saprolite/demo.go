@@ -47,6 +47,9 @@ When the two years are over the daemon stays up to be looked at, until Ctrl-C.`,
 				}
 				dir = temp
 			}
+			if _, err := os.Stat(filepath.Join(dir, "data")); err == nil {
+				return usage(cmd, fmt.Errorf("%s has the data of an earlier demo; name another folder, or delete it", dir))
+			}
 			err := runDemo(ctx, cmd.OutOrStdout(), dir, fast)
 			if ctx.Err() != nil && (err == nil || errors.Is(err, context.Canceled)) {
 				fmt.Fprintf(cmd.OutOrStdout(), "\nStopped. Everything is in %s; delete it when you like.\n", dir)
@@ -292,9 +295,6 @@ func (s *showing) sayTold(ctx context.Context) error {
 	if n := s.mails.Kept(); n > mails {
 		s.say("            -> mails/%s, posts/%s\n", numbers(mails, n, "eml"), numbers(posts, s.posts.Kept(), "json"))
 	}
-	if posts == 0 && s.posts.Kept() > 0 {
-		return s.firstPost()
-	}
 	return nil
 }
 
@@ -303,17 +303,6 @@ func numbers(from, to int, ending string) string {
 		return fmt.Sprintf("%03d.%s", to, ending)
 	}
 	return fmt.Sprintf("%03d.%s to %03d.%s", from+1, ending, to, ending)
-}
-
-// firstPost shows what a webhook gets.
-func (s *showing) firstPost() error {
-	body, err := os.ReadFile(filepath.Join(s.postsDir(), "001.json"))
-	if err != nil {
-		return err
-	}
-	const shown = 420 // bytes, a few lines
-	s.say("            This is how the first post begins, a CloudEvent:\n%s ...\n", wrap(string(body[:min(shown, len(body))]), 12))
-	return nil
 }
 
 // happenings says what goes on beside the weather.
@@ -361,7 +350,9 @@ func (s *showing) end(ctx context.Context) error {
 	s.say("\nTwo years are over. Where to look, all of it in %s:\n", s.dir)
 	s.say("  mails      %d in mails/ (open one with a mail program)\n", s.mails.Kept())
 	s.say("  webhook    %d posts in posts/\n", s.posts.Kept())
-	s.say("  metrics    http://%s/metrics\n", s.daemon.watch.address())
+	if !s.fast {
+		s.say("  metrics    http://%s/metrics\n", s.daemon.watch.address())
+	}
 	s.say("  a stand    saprolite show ashlar-ridge --config %s\n", filepath.Join(s.dir, "saprolite.yaml"))
 	s.say("  the log    saprolite.log\n")
 	return nil

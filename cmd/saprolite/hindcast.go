@@ -100,7 +100,7 @@ func runHindcast(cmd *cobra.Command, f hindcastFlags) error {
 		return err
 	}
 	if left > 0 {
-		return exitWith(exitData, fmt.Errorf("%d rows could not be used and were left out; they are listed above", left))
+		return exitWith(exitData, fmt.Errorf("rows that could not be used: %d; they are listed above", left))
 	}
 	return nil
 }
@@ -198,6 +198,7 @@ func readHistory(cmd *cobra.Command, files []string, h *engine.Hindcast) (left i
 			fmt.Fprintf(cmd.ErrOrStderr(), format+"\n", args...)
 		}
 	}
+	var sum tally
 	for _, name := range files {
 		file, err := os.Open(name)
 		if err != nil {
@@ -222,13 +223,16 @@ func readHistory(cmd *cobra.Command, files []string, h *engine.Hindcast) (left i
 				continue
 			}
 			if held := h.Add(o); held != nil {
-				say("%s:%d: %s: %s (%s)", name, r.Line(), held.Record, held.Reason, held.Code)
+				say("%s: line %d: %s: %s (%s)", name, r.Line(), held.Record, held.Reason, held.Code)
+				continue
 			}
+			sum.add(o)
 		}
 	}
 	if left > mostListed {
 		fmt.Fprintf(cmd.ErrOrStderr(), "... and %d more\n", left-mostListed)
 	}
+	sum.say(cmd.ErrOrStderr())
 	return left, nil
 }
 

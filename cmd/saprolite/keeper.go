@@ -29,6 +29,9 @@ type keeper struct {
 	since     int    // messages since the last save
 	saves     uint64
 	saveTook  time.Duration // all of them together
+
+	heldSaid map[string]time.Time // when the log last spoke of a source and code
+	onHeld   func(engine.Held)    // if set, is called for each
 }
 
 // brokerOptions are the broker's, as the operator wrote them.
@@ -57,7 +60,7 @@ func newKeeper(ctx context.Context, cfg *config.Config, reg *config.Register, b 
 	if err != nil {
 		return nil, err
 	}
-	k := &keeper{broker: b, books: books, log: log}
+	k := &keeper{broker: b, books: books, log: log, heldSaid: map[string]time.Time{}}
 	opts := engineSetup(cfg, reg)
 	opts.Shelf, opts.Record = shelf{ctx, books}, record{ctx, b}
 	if k.engine, err = engine.New(opts); err != nil {
@@ -127,6 +130,7 @@ func (k *keeper) handle(ctx context.Context, m broker.Msg) ([]alerts.Message, er
 	if err != nil {
 		return out.Told, fmt.Errorf("take in message %d (%s): %w", m.Seq, m.Subject, err)
 	}
+	k.sayHeld(out.Held)
 	for i, h := range out.Held {
 		data, err := json.Marshal(h)
 		if err != nil {
@@ -142,6 +146,29 @@ func (k *keeper) handle(ctx context.Context, m broker.Msg) ([]alerts.Message, er
 	k.since++
 	return out.Told, nil
 }
+
+// heldSaidAgain is how soon the log says again that a source has something
+// held for the same reason. Common practice of the trade, no source.
+const heldSaidAgain = time.Hour
+
+func (k *keeper) sayHeld(list []engine.Held) {
+	for _, h := range list {
+		if k.onHeld != nil {
+			k.onHeld(h)
+		}
+		key := h.Source + " " + h.Code
+		if now := time.Now(); now.Sub(k.heldSaid[key]) > heldSaidAgain {
+			if len(k.heldSaid) >= mostHeldSaid {
+				clear(k.heldSaid)
+			}
+			k.heldSaid[key] = now
+			k.log.Warn().Str("feed", h.Feed).Str("source", h.Source).Str("code", h.Code).Uint64("message", h.Seq).Msg("held: " + h.Reason)
+		}
+	}
+}
+
+// mostHeldSaid bounds what is remembered of that: senders choose the names.
+const mostHeldSaid = 1000
 
 // A save is due after so many messages (design 3.7); the daemon also saves
 // every half minute.

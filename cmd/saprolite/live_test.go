@@ -183,7 +183,7 @@ func TestDemo(t *testing.T) {
 	if code != 0 {
 		t.Fatalf("exit %d: %s\n%s", code, errs, out)
 	}
-	for _, want := range []string{"invented", "store-low: spent", "store-low: ended", "feed-silent: blind", "/metrics"} {
+	for _, want := range []string{"invented", "store-low: spent", "store-low: ended", "feed-silent: blind", "posts/001.json", "saprolite show"} {
 		if !strings.Contains(out, want) {
 			t.Errorf("the demo does not say %q:\n%s", want, out)
 		}
@@ -247,7 +247,7 @@ func TestLoadAndShow(t *testing.T) {
 	if code, out, errs := call(t, "show", "seattle", "--config", h.file); code != 0 || !strings.Contains(out, "no account yet") {
 		t.Fatalf("show before the load: exit %d\n%s%s", code, out, errs)
 	}
-	for range 2 {
+	for range 2 { // the second time it says nothing new
 		if code, out, errs := call(t, "load", history, "--config", h.file); code != 0 || !strings.Contains(out, "observations/s") {
 			t.Fatalf("load: exit %d\n%s%s", code, out, errs)
 		}
@@ -264,5 +264,47 @@ func TestLoadAndShow(t *testing.T) {
 	code, out, errs := call(t, "show", "seattle", "--config", h.file)
 	if code != 0 || !strings.Contains(out, "complete years                    4") || !strings.Contains(out, "blind") {
 		t.Errorf("show: exit %d\n%s%s", code, out, errs)
+	}
+}
+
+// A correction without its own time of becoming known is said to change
+// nothing, and replaces what is there with --correct, both ways.
+func TestCorrect(t *testing.T) {
+	dir := t.TempDir()
+	stands, history := seattleFiles(t, dir, "")
+	h := newHome(t, stands, "")
+	wrong := write(t, dir, "wrong.csv", "source,quantity,start,value,unit\nseattle,precipitation,2015-12-30,99,mm\n")
+	right := write(t, dir, "right.csv", "source,quantity,start,value,unit\nseattle,precipitation,2015-12-30,0,mm\n")
+	deficit := func() string {
+		for line := range strings.Lines(h.daily()) {
+			if strings.HasPrefix(line, "seattle,2015-12-31,") {
+				return strings.Split(line, ",")[8]
+			}
+		}
+		t.Fatal("no row of 2015-12-31")
+		return ""
+	}
+	load := func(args ...string) string {
+		code, out, errs := call(t, append([]string{"load", "--config", h.file}, args...)...)
+		if code != 0 {
+			t.Fatalf("load %v: exit %d\n%s%s", args, code, out, errs)
+		}
+		return out
+	}
+	load(history)
+	before := deficit()
+	load(wrong, "--correct")
+	if deficit() == before {
+		t.Error("the correction changed nothing")
+	}
+	load(right, "--correct")
+	if got := deficit(); got != before {
+		t.Errorf("corrected back: deficit %s, want %s", got, before)
+	}
+	if out := load(history); !strings.Contains(out, "precipitation") {
+		t.Errorf("load does not say what it loaded:\n%s", out)
+	}
+	if out := load(wrong); !strings.Contains(out, "1 values differ from what is known") || deficit() != before {
+		t.Errorf("an outdated value: deficit %s, want %s\n%s", deficit(), before, out)
 	}
 }

@@ -23,6 +23,7 @@ import (
 
 func newLoad() *cobra.Command {
 	var configFile string
+	var correct bool
 	c := &cobra.Command{
 		Use:   "load FILE...",
 		Short: "Bring years of history in from CSV files",
@@ -30,7 +31,9 @@ func newLoad() *cobra.Command {
 as safe as single messages. With a running daemon they go to it; without one the
 store is opened, and the accounts are settled before the command ends.
 
-Loading a file twice changes nothing. Rows that cannot be used are listed with
+Loading a file twice changes nothing. Of two values for the same time the one that
+became known later counts (column available, by default the end of its time); with
+--correct the rows of this load became known now, and so replace what is there. Rows that cannot be used are listed with
 file and line and left out; the command then ends with code 65. What the history
 shows of the past is recorded and not told; what is still true today is told once.
 
@@ -39,19 +42,20 @@ Columns: source,quantity,start,end,value,unit,sd,flag,available
 		Example: `  saprolite load rain-1990-2030.csv air-1990-2030.csv
   saprolite load --config /etc/saprolite/saprolite.yaml history.csv`,
 		Args: cobra.MinimumNArgs(1),
-		RunE: func(cmd *cobra.Command, files []string) error { return runLoad(cmd, configFile, files) },
+		RunE: func(cmd *cobra.Command, files []string) error { return runLoad(cmd, configFile, files, correct) },
 	}
 	configFlag(c, &configFile)
+	c.Flags().BoolVar(&correct, "correct", false, "these rows correct what was known: they count from now on")
 	return c
 }
 
-func runLoad(cmd *cobra.Command, configFile string, files []string) error {
+func runLoad(cmd *cobra.Command, configFile string, files []string, correct bool) error {
 	cfg, reg, err := readBoth(configFile)
 	if err != nil {
 		return err
 	}
 	ctx := cmd.Context()
-	b, err := broker.OpenOrAttach(ctx, brokerOptions(cfg, zerolog.Nop()))
+	b, err := openStore(ctx, cfg)
 	if err != nil {
 		return err
 	}
@@ -62,18 +66,30 @@ func runLoad(cmd *cobra.Command, configFile string, files []string) error {
 		}
 	}
 	l := &loading{reg: reg, to: b, errs: cmd.ErrOrStderr(), packs: map[string]*pack{}}
+	if correct {
+		l.known = time.Now().UTC()
+	}
 	if err := l.load(ctx, cmd, files); err != nil {
 		return err
 	}
 	if b.Attached() {
 		fmt.Fprintln(cmd.OutOrStdout(), "The running daemon takes it in; saprolite show STAND tells how far it is.")
-	} else if err := settleNow(ctx, cmd, cfg, reg, b); err != nil {
+	} else if err := l.settleNow(ctx, cmd, cfg, b); err != nil {
 		return err
 	}
 	if l.left > 0 {
-		return exitWith(exitData, fmt.Errorf("%d rows could not be used and were left out; they are listed above", l.left))
+		return exitWith(exitData, fmt.Errorf("rows that could not be used: %d; they are listed above", l.left))
 	}
 	return nil
+}
+
+// openStore reaches the running daemon's store, or opens it when none runs; no
+// port is opened for that.
+func openStore(ctx context.Context, cfg *config.Config) (*broker.Broker, error) {
+	o := brokerOptions(cfg, zerolog.Nop())
+	o.Listen = ""
+	b, err := broker.OpenOrAttach(ctx, o)
+	return b, opening(err)
 }
 
 // loading cuts history files into packs of one source each and stores them.
@@ -83,8 +99,13 @@ type loading struct {
 	errs  io.Writer
 	packs map[string]*pack
 
+	// known is when rows became known that do not say it themselves; zero: at
+	// their end.
+	known time.Time
+
 	rows, left int
 	bytes      int64
+	tally      tally
 }
 
 // pack is rows of one source on their way into one message.
@@ -117,6 +138,7 @@ func (l *loading) load(ctx context.Context, cmd *cobra.Command, files []string) 
 		fmt.Fprintf(l.errs, "... and %d more\n", l.left-mostListed)
 	}
 	took := time.Since(began)
+	l.tally.say(cmd.OutOrStdout())
 	fmt.Fprintf(cmd.OutOrStdout(), "%d observations in %.1f s: %.0f observations/s, %.1f MB/s\n",
 		l.rows, took.Seconds(), float64(l.rows)/took.Seconds(), float64(l.bytes)/1e6/took.Seconds())
 	return nil
@@ -167,7 +189,7 @@ func (l *loading) file(name string, batches *broker.Loader, bar io.Writer) error
 			return exitWith(exitData, fmt.Errorf("load %s: %w", name, err))
 		}
 		if !l.reg.Known(o.Source) {
-			l.leave("%s:%d: no stand draws on source %q and the stands file does not list it; add it there, or correct the id", name, r.Line(), o.Source)
+			l.leave("%s: line %d: no stand draws on source %q and the stands file does not list it; add it there, or correct the id", name, r.Line(), o.Source)
 			continue
 		}
 		if err := l.row(batches, o); err != nil {
@@ -191,6 +213,10 @@ func (l *loading) row(batches *broker.Loader, o observation.Observation) error {
 	if p.csv == nil {
 		p.csv = wire.NewCSVWriter(&p.body)
 	}
+	if o.Available.IsZero() {
+		o.Available = l.known
+	}
+	l.tally.add(o)
 	if err := p.csv.Write(o); err != nil {
 		return fmt.Errorf("load: %w", err)
 	}
@@ -237,11 +263,12 @@ func firstTick(ctx context.Context, b *broker.Broker) error {
 
 // settleNow settles what has been stored, in a store that this command owns:
 // a tick of now, everything up to it taken in, the books saved.
-func settleNow(ctx context.Context, cmd *cobra.Command, cfg *config.Config, reg *config.Register, b *broker.Broker) error {
-	k, err := newKeeper(ctx, cfg, reg, b, newLog(cmd.ErrOrStderr(), zerolog.WarnLevel))
+func (l *loading) settleNow(ctx context.Context, cmd *cobra.Command, cfg *config.Config, b *broker.Broker) error {
+	k, err := newKeeper(ctx, cfg, l.reg, b, newLog(cmd.ErrOrStderr(), zerolog.ErrorLevel))
 	if err != nil {
 		return err
 	}
+	k.onHeld = func(h engine.Held) { l.leave("held: %s: %s (%s)", or(h.Record, h.Source), h.Reason, h.Code) }
 	last, err := b.Publish(ctx, engine.TickSubject, nil, engine.EncodeTick(time.Now()))
 	if err != nil {
 		return err
@@ -256,11 +283,10 @@ func settleNow(ctx context.Context, cmd *cobra.Command, cfg *config.Config, reg 
 		return err
 	}
 	c := k.engine.Counts()
-	fmt.Fprintf(cmd.OutOrStdout(), "settled %d stand-days", c.StandDays)
-	if c.Held > 0 {
-		fmt.Fprintf(cmd.OutOrStdout(), "; %d observations are held because they cannot be true, see stream HELD", c.Held)
+	fmt.Fprintf(cmd.OutOrStdout(), "settled %d stand-days\n", c.StandDays)
+	if c.Outdated > 0 {
+		fmt.Fprintf(cmd.OutOrStdout(), "%d values differ from what is known and are not newer, so they changed nothing; to replace what is there load them with --correct\n", c.Outdated)
 	}
-	fmt.Fprintln(cmd.OutOrStdout())
 	return nil
 }
 

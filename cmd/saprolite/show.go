@@ -7,7 +7,6 @@ import (
 	"math"
 	"strings"
 
-	"github.com/rs/zerolog"
 	"github.com/spf13/cobra"
 
 	"saprolite/cmd/saprolite/engine"
@@ -45,9 +44,9 @@ func runShow(cmd *cobra.Command, file, id string) error {
 		return exitWith(exitUsage, fmt.Errorf("no stand %q in %s%s", id, cfg.Stands, like(reg, id)))
 	}
 	ctx := cmd.Context()
-	b, err := broker.OpenOrAttach(ctx, brokerOptions(cfg, zerolog.Nop()))
+	b, err := openStore(ctx, cfg)
 	if err != nil {
-		return opening(err)
+		return err
 	}
 	defer b.Close(context.WithoutCancel(ctx))
 	books, err := b.Books(ctx)
@@ -60,6 +59,10 @@ func runShow(cmd *cobra.Command, file, id string) error {
 	}
 	setup := standSetup(cfg, reg, stand)
 	if !ok {
+		if n, err := waiting(ctx, b, books); err != nil || n > 0 {
+			fmt.Fprintf(cmd.OutOrStdout(), "%s (%s): no account yet; %d messages are being taken in, ask again in a few seconds.\n", stand.Name, id, n)
+			return err
+		}
 		fmt.Fprintf(cmd.OutOrStdout(), "%s (%s): no account yet. It begins with the first day of rain data from %s.\n", stand.Name, id, setup.Options.RainFrom)
 		return nil
 	}
@@ -73,6 +76,23 @@ func runShow(cmd *cobra.Command, file, id string) error {
 	}
 	sheet{cmd.OutOrStdout()}.account(stand, &setup, account)
 	return nil
+}
+
+// waiting is how many messages the books do not have yet.
+func waiting(ctx context.Context, b *broker.Broker, books *broker.Books) (uint64, error) {
+	state, err := b.State(ctx, broker.Observations)
+	if err != nil {
+		return 0, err
+	}
+	data, _, _, err := books.Get(ctx, engine.CursorKey)
+	if err != nil {
+		return 0, err
+	}
+	cursor, err := engine.DecodeCursor(data)
+	if err != nil || cursor >= state.Last {
+		return 0, err
+	}
+	return state.Last - cursor, nil
 }
 
 // like names the stands whose id or name holds what was asked for.

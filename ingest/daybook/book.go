@@ -114,10 +114,12 @@ type Refusal struct{ Reason string }
 func (r *Refusal) Error() string { return r.Reason }
 
 // Change says which days' values an observation changed; Any is false when it
-// said nothing new.
+// said nothing new. Outdated says that it says something else than is known,
+// and is not newer.
 type Change struct {
 	Any         bool
 	First, Last quantity.Day
+	Outdated    bool
 }
 
 // Refuses says why an observation cannot be kept, nil if it can.
@@ -144,7 +146,7 @@ func (b *Book) Add(o observation.Observation) (Change, error) {
 	o = o.In(b.opts.Offset)
 	r := Reading{
 		Start: o.Start.UnixNano(), End: o.End.UnixNano(), Value: oneNaN(o.Value), SD: oneNaN(o.SD), Flag: o.Flag,
-		Available: o.Available.Truncate(time.Second).UnixNano(),
+		Available: o.Available.Truncate(time.Millisecond).UnixNano(),
 	}
 	first, last := quantity.DayOf(o.Start, b.opts.Offset), quantity.DayEndingAt(o.End, b.opts.Offset)
 	if o.Start.Equal(o.End) {
@@ -152,12 +154,13 @@ func (b *Book) Add(o observation.Observation) (Change, error) {
 	}
 	var all Change
 	for d := first; d <= last; d++ {
-		changed, err := b.addToDay(d, o.Quantity, info.Fold, r)
+		changed, outdated, err := b.addToDay(d, o.Quantity, info.Fold, r)
 		if err != nil {
 			return all, err
 		}
+		all.Outdated = all.Outdated || outdated
 		if changed && !all.Any {
-			all = Change{Any: true, First: d, Last: d}
+			all.Any, all.First, all.Last = true, d, d
 		} else if changed {
 			all.Last = d
 		}
@@ -174,10 +177,10 @@ func oneNaN(v float64) float64 {
 	return v
 }
 
-func (b *Book) addToDay(d quantity.Day, q quantity.Quantity, how quantity.Fold, r Reading) (bool, error) {
+func (b *Book) addToDay(d quantity.Day, q quantity.Quantity, how quantity.Fold, r Reading) (changed, outdated bool, err error) {
 	p, err := b.page(d.Year())
 	if err != nil {
-		return false, err
+		return false, false, err
 	}
 	c := p[q]
 	if c == nil {
@@ -194,34 +197,34 @@ func (b *Book) addToDay(d quantity.Day, q quantity.Quantity, how quantity.Fold, 
 		if known {
 			old := Reading{Start: from, End: to, Value: had.Value, SD: had.SD, Flag: had.Flag, Available: had.Available.UnixNano()}
 			if !r.newer(old) {
-				return false, nil
+				return false, !r.sameContent(old), nil
 			}
 		}
 		// Kept as it came, whatever its flag: the page is all there is of it.
 		v := observation.DayValue{Value: r.Value, SD: r.SD, Flag: r.Flag, Available: time.Unix(0, r.Available).UTC()}
-		return b.setDay(d, q, c, i, v, true, end, had, known), nil
+		return b.setDay(d, q, c, i, v, true, end, had, known), false, nil
 	}
 
 	list, err := b.readings(d, q)
 	if err != nil {
-		return false, err
+		return false, false, err
 	}
 	if known && c.Flag[i]&whole != 0 && len(list) == 0 {
 		list = append(list, Reading{Start: from, End: to, Value: had.Value, SD: had.SD, Flag: had.Flag, Available: had.Available.UnixNano()})
 	}
-	list, written, _ := insert(list, r)
+	list, written, outdated := insert(list, r)
 	v := fold(how, from, to, b.opts.Interval, list)
 	if !written && known && c.Flag[i]&whole == 0 && sameDay(had, v) {
-		return false, nil
+		return false, outdated, nil
 	}
 	// A reading that is there while its day is not: a save broke off between
 	// the two.
 	if written {
 		if err := b.setReadings(d, q, list); err != nil {
-			return false, err
+			return false, false, err
 		}
 	}
-	return b.setDay(d, q, c, i, v, false, end, had, known), nil
+	return b.setDay(d, q, c, i, v, false, end, had, known), outdated, nil
 }
 
 func (b *Book) setDay(d quantity.Day, q quantity.Quantity, c *column, i int, v observation.DayValue, isWhole bool, end time.Time, had observation.DayValue, known bool) bool {

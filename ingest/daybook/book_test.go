@@ -80,7 +80,7 @@ func TestFold(t *testing.T) {
 	t.Run("an interval that ends at midnight belongs to the day that ends", func(t *testing.T) {
 		b := open(t, Options{Source: "gauge", Offset: offset})
 		change, err := b.Add(rainAt(offset, 23, 1, 4))
-		if err != nil || change != (Change{true, first, first}) {
+		if err != nil || change != (Change{Any: true, First: first, Last: first}) {
 			t.Errorf("changed %+v, %v", change, err)
 		}
 	})
@@ -182,8 +182,8 @@ func TestLaterAvailableWins(t *testing.T) {
 	corrected.Available = corrected.Available.Add(40 * 24 * time.Hour)
 	for i, o := range []observation.Observation{corrected, raw, corrected} {
 		change, err := b.Add(o)
-		if err != nil || change.Any != (i == 0) {
-			t.Errorf("add %d: changed %v, err %v", i, change.Any, err)
+		if err != nil || change.Any != (i == 0) || change.Outdated != (i == 1) {
+			t.Errorf("add %d: %+v, err %v", i, change, err)
 		}
 	}
 	if v := day(t, b, quantity.Precipitation, first); v.Value != 7 {

@@ -24,7 +24,7 @@ type column struct {
 	Value []float64
 	SD    []float64 // empty while every sd is unknown
 	Flag  []byte    // 0: nothing came; otherwise QARTOD's flag, plus whole
-	// Known is when the value became known: seconds after the end of its day.
+	// Known is when the value became known: milliseconds after the end of its day.
 	Known []int64
 }
 
@@ -44,7 +44,7 @@ func (c *column) get(i int, end time.Time) (observation.DayValue, bool) {
 	if len(c.SD) > 0 {
 		v.SD = c.SD[i]
 	}
-	v.Available = end.Add(time.Duration(c.Known[i]) * time.Second)
+	v.Available = end.Add(time.Duration(c.Known[i]) * time.Millisecond)
 	return v, true
 }
 
@@ -63,7 +63,7 @@ func (c *column) set(i int, v observation.DayValue, isWhole bool, end time.Time)
 	if isWhole {
 		c.Flag[i] |= whole
 	}
-	c.Known[i] = int64(v.Available.Sub(end) / time.Second)
+	c.Known[i] = int64(v.Available.Sub(end) / time.Millisecond)
 }
 
 // codec writes books deterministically: the same content is the same bytes.

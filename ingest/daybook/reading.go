@@ -52,9 +52,9 @@ func (r Reading) sameContent(s Reading) bool {
 func sameFloat(a, b float64) bool { return a == b || math.IsNaN(a) && math.IsNaN(b) }
 
 // insert puts r among readings sorted by Start, then by End from long to
-// short. It tells whether anything was written, and whether what the readings
-// say (not only when it was known) has changed.
-func insert(list []Reading, r Reading) (out []Reading, written, changed bool) {
+// short. It tells whether anything was written, and if not, whether r says
+// something else than what is there and is not newer.
+func insert(list []Reading, r Reading) (out []Reading, written, outdated bool) {
 	i, found := slices.BinarySearchFunc(list, r, func(a, b Reading) int {
 		if c := cmp.Compare(a.Start, b.Start); c != 0 {
 			return c
@@ -62,14 +62,13 @@ func insert(list []Reading, r Reading) (out []Reading, written, changed bool) {
 		return cmp.Compare(b.End, a.End)
 	})
 	if !found {
-		return slices.Insert(list, i, r), true, true
+		return slices.Insert(list, i, r), true, false
 	}
 	if !r.newer(list[i]) {
-		return list, false, false
+		return list, false, !r.sameContent(list[i])
 	}
-	changed = !r.sameContent(list[i])
 	list[i] = r
-	return list, true, changed
+	return list, true, false
 }
 
 // fold makes the day value of the day [from, to) from its readings, which are

@@ -201,7 +201,7 @@ func converted(field, unitField string, v float64, span time.Duration, convert f
 func readNumber(field string, b []byte) (float64, *Problem) {
 	for _, ch := range b {
 		if (ch < '0' || ch > '9') && ch != '.' && ch != '-' && ch != '+' && ch != 'e' && ch != 'E' {
-			return 0, problem(BadValue, field, "%s is not a number; write it like 12.5, or leave it empty if it is not known", brief(b))
+			return 0, problem(BadValue, field, "%s is not a number; write it like 12.5, or leave it empty with flag 9 if it is known to be missing", brief(b))
 		}
 	}
 	v, err := strconv.ParseFloat(string(b), 64)
@@ -209,7 +209,7 @@ func readNumber(field string, b []byte) (float64, *Problem) {
 		return 0, problem(BadValue, field, "%s is too large for a number", brief(b))
 	}
 	if err != nil {
-		return 0, problem(BadValue, field, "%s is not a number; write it like 12.5, or leave it empty if it is not known", brief(b))
+		return 0, problem(BadValue, field, "%s is not a number; write it like 12.5, or leave it empty with flag 9 if it is known to be missing", brief(b))
 	}
 	return v, nil
 }

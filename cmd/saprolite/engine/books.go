@@ -83,6 +83,17 @@ func DecodeHead(data []byte) (HeadBook, error) {
 	return h, err
 }
 
+// DecodeCursor reads how far the books are from what CursorKey holds; nil data
+// is 0.
+func DecodeCursor(data []byte) (uint64, error) {
+	var c cursorBook
+	if len(data) == 0 {
+		return 0, nil
+	}
+	err := cbor.Unmarshal(data, &c)
+	return c.Seq, err
+}
+
 // readBooks reads cursor and heads. A head that another setup or program made
 // is left: its stand settles again from its pages at the next tick.
 func (e *Engine) readBooks() error {

@@ -99,6 +99,7 @@ type drawn struct {
 // Counts are totals since the engine was made.
 type Counts struct {
 	Observations uint64 // taken into a daybook
+	Outdated     uint64 // of these, said something else than is known and were not newer
 	Held         uint64
 	Ticks        uint64
 	StandDays    uint64 // settled, again ones too

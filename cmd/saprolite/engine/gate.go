@@ -229,6 +229,9 @@ func (e *Engine) add(o observation.Observation, src *source) error {
 		return err
 	}
 	e.counts.Observations++
+	if change.Outdated {
+		e.counts.Outdated++
+	}
 	if change.Any && (isVegetationIndex(o.Quantity) || slices.Contains(detectors.Draws[:], o.Quantity)) {
 		earliest(e.fresh, src.setup.ID, change.First)
 		earliest(e.unsaved, src.setup.ID, change.First)

@@ -18,7 +18,6 @@ import (
 	"github.com/nats-io/nats.go/jetstream"
 	"github.com/rs/zerolog"
 
-	"saprolite/alerts"
 	"saprolite/cmd/saprolite/engine"
 	"saprolite/ingest/broker"
 	"saprolite/ingest/observation"
@@ -230,53 +229,6 @@ func TestFailuresAreJoined(t *testing.T) {
 	if err := errors.Join(none.add(nil), none.joined()); err != nil {
 		t.Error(err)
 	}
-}
-
-// everTold is stream ALERTS.
-func everTold(t *testing.T, b *broker.Broker) []alerts.Message {
-	t.Helper()
-	state, err := b.State(t.Context(), broker.Alerts)
-	if err != nil {
-		t.Fatal(err)
-	}
-	var all []alerts.Message
-	if state.Last == 0 {
-		return nil
-	}
-	done := errors.New("done")
-	err = b.Follow(t.Context(), broker.Following{Stream: broker.Alerts, Each: func(m broker.Msg) error {
-		var a alerts.Message
-		if err := json.Unmarshal(m.Data, &a); err != nil {
-			return err
-		}
-		all = append(all, a)
-		if m.Seq == state.Last {
-			return done
-		}
-		return nil
-	}})
-	if !errors.Is(err, done) {
-		t.Fatal(err)
-	}
-	return all
-}
-
-// told is everTold of a home nobody lives in.
-func (h *home) told() []alerts.Message {
-	h.t.Helper()
-	d := h.opened(nil)
-	all := everTold(h.t, d.broker)
-	if err := d.close(); err != nil {
-		h.t.Fatal(err)
-	}
-	return all
-}
-
-func ids(list []alerts.Message) (all []string) {
-	for _, m := range list {
-		all = append(all, m.MessageID()+" "+string(m.MsgType))
-	}
-	return all
 }
 
 // page asks one of the daemon's pages.

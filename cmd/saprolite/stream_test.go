@@ -2,15 +2,18 @@ package main
 
 import (
 	"context"
+	"encoding/json"
 	"errors"
 	"os"
 	"path/filepath"
 	"strings"
 	"testing"
+	"time"
 
 	"github.com/google/go-cmp/cmp"
 	"github.com/rs/zerolog"
 
+	"saprolite/alerts"
 	"saprolite/config"
 	"saprolite/ingest/broker"
 	"saprolite/ingest/quantity"
@@ -179,7 +182,7 @@ func TestTidyLeavesWhatIsUnread(t *testing.T) {
 		t.Fatal(err)
 	}
 	if state, err := d.broker.State(t.Context(), broker.Observations); err != nil || state.Messages != 10 {
-		t.Errorf("%d of 10 unread messages are left, error %v", state.Messages, err)
+		t.Fatalf("%d of 10 unread messages are left, error %v", state.Messages, err)
 	}
 	if err := takeUpTo(t.Context(), d.keeper, 10, func() {}); err != nil {
 		t.Fatal(err)
@@ -190,4 +193,51 @@ func TestTidyLeavesWhatIsUnread(t *testing.T) {
 	if state, err := d.broker.State(t.Context(), broker.Observations); err != nil || state.Messages >= 10 || state.Messages == 0 {
 		t.Errorf("%d messages are left of 10 that are in the books of a full stream, error %v", state.Messages, err)
 	}
+}
+
+// everTold is stream ALERTS.
+func everTold(t *testing.T, b *broker.Broker) []alerts.Message {
+	t.Helper()
+	state, err := b.State(t.Context(), broker.Alerts)
+	if err != nil {
+		t.Fatal(err)
+	}
+	var all []alerts.Message
+	if state.Last == 0 {
+		return nil
+	}
+	done := errors.New("done")
+	err = b.Follow(t.Context(), broker.Following{Stream: broker.Alerts, Each: func(m broker.Msg) error {
+		var a alerts.Message
+		if err := json.Unmarshal(m.Data, &a); err != nil {
+			return err
+		}
+		all = append(all, a)
+		if m.Seq == state.Last {
+			return done
+		}
+		return nil
+	}})
+	if !errors.Is(err, done) {
+		t.Fatal(err)
+	}
+	return all
+}
+
+// told is everTold of a home nobody lives in.
+func (h *home) told() []alerts.Message {
+	h.t.Helper()
+	d := h.opened(nil)
+	all := everTold(h.t, d.broker)
+	if err := d.close(); err != nil {
+		h.t.Fatal(err)
+	}
+	return all
+}
+
+func ids(list []alerts.Message) (all []string) {
+	for _, m := range list {
+		all = append(all, m.MessageID()+" "+string(m.MsgType))
+	}
+	return all
 }

@@ -39,6 +39,7 @@ type daemon struct {
 	// onTold, if set, is called in the loop for each message that was told.
 	onTold func(alerts.Message)
 
+	began  time.Time
 	settle chan struct{} // asks the clock for a tick now
 	again  time.Duration // how soon the clock tries again, see writeAgain
 }
@@ -58,7 +59,7 @@ const (
 
 // openDaemon opens the store and the books.
 func openDaemon(ctx context.Context, cfg *config.Config, reg *config.Register, log zerolog.Logger) (*daemon, error) {
-	d := &daemon{cfg: cfg, reg: reg, log: log, settle: make(chan struct{}, 1), again: writeAgain}
+	d := &daemon{cfg: cfg, reg: reg, log: log, began: time.Now(), settle: make(chan struct{}, 1), again: writeAgain}
 	var err error
 	if d.broker, err = broker.Open(ctx, brokerOptions(cfg, log)); err != nil {
 		return nil, opening(err)

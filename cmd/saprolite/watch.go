@@ -48,7 +48,7 @@ type sight struct {
 }
 
 func newWatch(d *daemon) *watch {
-	w := &watch{daemon: d, started: time.Now()}
+	w := &watch{daemon: d, started: d.began}
 	w.cursor.Store(d.keeper.engine.Cursor())
 	w.turned()
 	w.look()

@@ -304,7 +304,7 @@ func TestCorrect(t *testing.T) {
 	if out := load(history); !strings.Contains(out, "precipitation") {
 		t.Errorf("load does not say what it loaded:\n%s", out)
 	}
-	if out := load(wrong); !strings.Contains(out, "1 values differ from what is known") || deficit() != before {
+	if out := load(wrong); !strings.Contains(out, "changed nothing: 1") || deficit() != before {
 		t.Errorf("an outdated value: deficit %s, want %s\n%s", deficit(), before, out)
 	}
 }

@@ -33,9 +33,11 @@ store is opened, and the accounts are settled before the command ends.
 
 Loading a file twice changes nothing. Of two values for the same time the one that
 became known later counts (column available, by default the end of its time); with
---correct the rows of this load became known now, and so replace what is there. Rows that cannot be used are listed with
-file and line and left out; the command then ends with code 65. What the history
-shows of the past is recorded and not told; what is still true today is told once.
+--correct the rows of this load became known now, and so replace what is there.
+
+Rows that cannot be used are listed with file and line and left out; the command
+then ends with code 65. What the history shows of the past is recorded and not
+told; what is still true today is told once.
 
 Columns: source,quantity,start,end,value,unit,sd,flag,available
 (end, sd, flag and available may be left out; see saprolite hindcast --help).`,
@@ -285,7 +287,7 @@ func (l *loading) settleNow(ctx context.Context, cmd *cobra.Command, cfg *config
 	c := k.engine.Counts()
 	fmt.Fprintf(cmd.OutOrStdout(), "settled %d stand-days\n", c.StandDays)
 	if c.Outdated > 0 {
-		fmt.Fprintf(cmd.OutOrStdout(), "%d values differ from what is known and are not newer, so they changed nothing; to replace what is there load them with --correct\n", c.Outdated)
+		fmt.Fprintf(cmd.OutOrStdout(), "values that differ from what is known, are not newer and so changed nothing: %d; to replace what is there load them with --correct\n", c.Outdated)
 	}
 	return nil
 }

@@ -141,7 +141,7 @@ func (e *Engine) takeCSV(m Message, feed string, src *source, out *Outcome) erro
 			return nil
 		}
 		if err != nil {
-			out.hold(feed, src.setup.ID, codeOf(err), err.Error(), m.Seq, "")
+			out.hold(feed, src.setup.ID, codeOf(err), err.Error(), m.Seq, lineOf(m.Data, r.Line()))
 			continue
 		}
 		if o.Source != src.setup.ID {
@@ -169,6 +169,16 @@ func (e *Engine) takeSenML(m Message, feed string, src *source, out *Outcome) er
 		}
 	}
 	return nil
+}
+
+// lineOf is the text of a line, counted from 1.
+func lineOf(data []byte, n int) string {
+	for line := range bytes.Lines(data) {
+		if n--; n == 0 {
+			return string(bytes.TrimRight(line, "\r\n"))
+		}
+	}
+	return ""
 }
 
 func codeOf(err error) wire.Code {

@@ -164,3 +164,13 @@ func TestMessageIsTakenInOnce(t *testing.T) {
 		t.Errorf("value %v (%v), want the first", v, err)
 	}
 }
+
+// What is held comes with its text, so that somebody can act on it.
+func TestHeldRowHasItsText(t *testing.T) {
+	const bad = "gauge-1,precipitation,2031-04-09,much,mm"
+	out, _ := gate(t, Message{Subject: "obs.load.gauge-1", ContentType: TypeCSV,
+		Data: []byte("source,quantity,start,value,unit\ngauge-1,precipitation,2031-04-08,4,mm\r\n" + bad + "\r\n")})
+	if len(out.Held) != 1 || out.Held[0].Record != bad {
+		t.Errorf("held %+v, want the row %q", out.Held, bad)
+	}
+}

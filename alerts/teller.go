@@ -259,6 +259,11 @@ func (t *Teller) cancel(before Message, w Wanted) Message {
 		m.Headline = fmt.Sprintf("Withdrawn: by what is known now this did not hold (was: %s).", before.Level)
 		m.Reason = sentences("What is known by now of the days before "+m.Ended.String()+" (later or revised data, or changed settings) does not bear it out. What was told is withdrawn.", doubt)
 		m.FieldCheck, m.EndsWhen = "Nothing: what was told did not hold.", "It has ended."
+		if m.Kind == finding.FeedSilent {
+			m.Headline = "The data that were missing have come in; the account is made right."
+			m.Reason = sentences("What did not come before "+m.Ended.String()+" is there now.", doubt)
+			m.FieldCheck = "Why it came late: the logger's line and power."
+		}
 		return m
 	}
 	lasted := fmt.Sprintf("It lasted from %s to %s.", before.Onset, m.Ended-1)

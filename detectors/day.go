@@ -35,15 +35,6 @@ func NoInputs(d quantity.Day) Inputs {
 	return Inputs{Weather: w, Precipitation: quantity.Millimetres(nan), ActualET: quantity.Millimetres(nan), Greenness: quantity.Index(nan)}
 }
 
-// update keeps the last source known of each.
-func (f *From) update(today *From) {
-	for _, x := range [...]struct{ last, now *string }{{&f.Rain, &today.Rain}, {&f.ET, &today.ET}, {&f.Air, &today.Air}} {
-		if *x.now != "" {
-			*x.last = *x.now
-		}
-	}
-}
-
 // Set puts a day value where it belongs and keeps in words where it came from.
 // It tells whether a stand has a use for the quantity; v is in the canonical
 // unit (design 5.5).

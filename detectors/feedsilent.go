@@ -50,10 +50,10 @@ func (s *Stand) Blind() (since quantity.Day, blind bool) {
 
 func (s *Stand) feedSilent(e *Episode) finding.Finding {
 	days := s.silentFor()
-	what, from := "rain data", or(s.from.Rain, s.opts.RainFrom)
+	what, from := "rain data", s.opts.RainFrom
 	meanwhile := fmt.Sprintf("The account stands still at a deficit of %s: days without rain data neither dry nor wet a stand, and its true deficit is less and less known.", round(s.Today.Deficit))
 	if s.State.NoAir > s.State.NoRain {
-		what, from = "data on evapotranspiration", or(s.from.ET, or(s.from.Air, s.opts.AirFrom))
+		what, from = "data on evapotranspiration", s.opts.AirFrom
 		meanwhile = fmt.Sprintf("Rain is still credited and evapotranspiration taken as what the stand usually uses at this time of year; the deficit of %s is less and less known.", round(s.Today.Deficit))
 		if s.Today.Still {
 			meanwhile = fmt.Sprintf("The account stands still at a deficit of %s.", round(s.Today.Deficit))
@@ -67,7 +67,7 @@ func (s *Stand) feedSilent(e *Episode) finding.Finding {
 	return finding.Finding{
 		Stand: s.opts.ID, Kind: finding.FeedSilent, Level: e.Level, Onset: e.Onset, Day: s.Today.Day, Ended: e.Ended, Changed: e.decided(),
 		Sources: 1, Direct: true,
-		Headline: fmt.Sprintf("No %s for %d days. They came from %s.", what, days, from),
+		Headline: fmt.Sprintf("No %s for %d days. They should come from %s.", what, days, from),
 		Reason:   reason,
 		Evidence: []finding.Evidence{
 			{Name: "days without " + what, Value: float64(days), Low: nan, High: nan, Unit: "d", Source: from},

@@ -17,7 +17,6 @@ type Stand struct {
 	opts     Options
 	first    quantity.Day
 	limit    ledger.Limit
-	from     From          // where the last known numbers came from
 	peaks    [weeks]uint16 // of the running year
 	years    []Year        // closed
 	episodes []Episode     // closed
@@ -107,7 +106,6 @@ func (s *Stand) Step(in *Inputs) {
 	}
 	a.Deficit = st.Store.Deficit
 	s.Today = a
-	s.from.update(&a.From)
 
 	y := s.Running()
 	y.settle(&s.Today, st.Anchored)

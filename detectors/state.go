@@ -50,7 +50,6 @@ type Head struct {
 	First       quantity.Day // the account's first day
 	Now         State
 	Today       Account // of Now.Day
-	From        From    // where the last known numbers came from
 	Peaks       [weeks]uint16
 	Years       []Year
 	Episodes    []Episode
@@ -147,7 +146,7 @@ func (c *checkpoints) forget(day quantity.Day) {
 // Head returns what must be kept to go on later as if never stopped.
 func (s *Stand) Head() Head {
 	return Head{
-		Schema: Schema, First: s.first, Now: s.State, Today: s.Today, From: s.from, Peaks: s.peaks,
+		Schema: Schema, First: s.first, Now: s.State, Today: s.Today, Peaks: s.peaks,
 		Years: orNone(s.years), Episodes: orNone(s.episodes), Checkpoints: s.past.all(s.State.Day),
 	}
 }
@@ -171,7 +170,7 @@ func Restore(opts Options, h Head) (*Stand, error) {
 		return nil, fmt.Errorf("stand %s: head is incomplete: settle again", opts.ID)
 	}
 	s := New(opts, h.First)
-	s.State, s.Today, s.from, s.peaks = h.Now, h.Today, h.From, h.Peaks
+	s.State, s.Today, s.peaks = h.Now, h.Today, h.Peaks
 	s.years, s.episodes = h.Years, h.Episodes
 	for i := range h.Checkpoints {
 		c := &h.Checkpoints[i]

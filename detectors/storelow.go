@@ -248,7 +248,7 @@ func (s *Stand) Evidence() []finding.Evidence {
 		{Name: "rain on the day", Value: tenth(a.Precipitation), Low: nan, High: nan, Unit: "mm", Source: orUnknown(a.From.Rain)},
 	}
 	if n := s.State.Unseen; n > 0 {
-		list = append(list, finding.Evidence{Name: "days without rain data since the store was full", Value: float64(n), Low: nan, High: nan, Unit: "d", Source: or(s.from.Rain, s.opts.RainFrom)})
+		list = append(list, finding.Evidence{Name: "days without rain data since the store was full", Value: float64(n), Low: nan, High: nan, Unit: "d", Source: s.opts.RainFrom})
 	}
 	return list
 }
@@ -260,11 +260,9 @@ func round(v quantity.Millimetres) string { return fmt.Sprintf("%.0f mm", float6
 
 func percent(share float64) string { return fmt.Sprintf("%.0f %%", 100*math.Max(0, share)) }
 
-func orUnknown(s string) string { return or(s, "unknown") }
-
-func or(s, otherwise string) string {
+func orUnknown(s string) string {
 	if s == "" {
-		return otherwise
+		return "unknown"
 	}
 	return s
 }

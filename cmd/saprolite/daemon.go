@@ -69,6 +69,9 @@ func openDaemon(ctx context.Context, cfg *config.Config, reg *config.Register, l
 		return nil, errors.Join(err, d.close())
 	}
 	d.watch = newWatch(d)
+	if d.watch.couriers, err = d.couriers(); err != nil {
+		return nil, errors.Join(err, d.close())
+	}
 	return d, nil
 }
 
@@ -81,10 +84,6 @@ func (d *daemon) close() error {
 // run works until ctx is done, which is a clean end, or something fails that
 // only a restart can mend.
 func (d *daemon) run(ctx context.Context) error {
-	couriers, err := d.couriers()
-	if err != nil {
-		return errors.Join(err, d.close())
-	}
 	var actors run.Group
 	var failures failures
 	actor := func(work func(context.Context) error) {
@@ -96,7 +95,7 @@ func (d *daemon) run(ctx context.Context) error {
 	if !d.invented {
 		actor(d.clock)
 	}
-	for _, c := range couriers {
+	for _, c := range d.watch.couriers {
 		actor(c.Run)
 	}
 	actor(d.watch.serve)

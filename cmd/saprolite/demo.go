@@ -78,6 +78,8 @@ type showing struct {
 	mails *demo.Mailbox
 	posts *demo.Hook
 
+	shownMails, shownPosts int // of what has come in, how many were named
+
 	mu   sync.Mutex
 	told []alerts.Message // since they were printed
 }
@@ -283,7 +285,6 @@ func (s *showing) sayTold(ctx context.Context) error {
 	if len(told) == 0 {
 		return nil
 	}
-	mails, posts := s.mails.Kept(), s.posts.Kept()
 	for _, m := range told {
 		if err := sayMessage(s.out, m); err != nil {
 			return err
@@ -292,8 +293,9 @@ func (s *showing) sayTold(ctx context.Context) error {
 	if err := s.daemon.watch.waitDelivered(ctx, 30*time.Second); err != nil {
 		return err
 	}
-	if n := s.mails.Kept(); n > mails {
-		s.say("            -> mails/%s, posts/%s\n", numbers(mails, n, "eml"), numbers(posts, s.posts.Kept(), "json"))
+	if n, posts := s.mails.Kept(), s.posts.Kept(); n > s.shownMails {
+		s.say("            -> mails/%s, posts/%s\n", numbers(s.shownMails, n, "eml"), numbers(s.shownPosts, posts, "json"))
+		s.shownMails, s.shownPosts = n, posts
 	}
 	return nil
 }

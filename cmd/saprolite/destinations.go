@@ -26,7 +26,6 @@ func (d *daemon) couriers() ([]*alerts.Courier, error) {
 		}
 		out = append(out, courier)
 	}
-	d.watch.couriers = out
 	return out, nil
 }
 

@@ -79,6 +79,9 @@ func runLoad(cmd *cobra.Command, configFile string, files []string, correct bool
 	} else if err := l.settleNow(ctx, cmd, cfg, b); err != nil {
 		return err
 	}
+	if l.left > mostListed {
+		fmt.Fprintf(l.errs, "... and %d more\n", l.left-mostListed)
+	}
 	if l.left > 0 {
 		return exitWith(exitData, fmt.Errorf("rows that could not be used: %d; they are listed above", l.left))
 	}
@@ -101,8 +104,8 @@ type loading struct {
 	errs  io.Writer
 	packs map[string]*pack
 
-	// known is when rows became known that do not say it themselves; zero: at
-	// their end.
+	// known is when the rows became known, whatever they say themselves; zero:
+	// when they say, or at their end.
 	known time.Time
 
 	rows, left int
@@ -136,9 +139,6 @@ func (l *loading) load(ctx context.Context, cmd *cobra.Command, files []string) 
 		return err
 	}
 	bar.Finish()
-	if l.left > mostListed {
-		fmt.Fprintf(l.errs, "... and %d more\n", l.left-mostListed)
-	}
 	took := time.Since(began)
 	l.tally.say(cmd.OutOrStdout())
 	fmt.Fprintf(cmd.OutOrStdout(), "%d observations in %.1f s: %.0f observations/s, %.1f MB/s\n",
@@ -215,7 +215,7 @@ func (l *loading) row(batches *broker.Loader, o observation.Observation) error {
 	if p.csv == nil {
 		p.csv = wire.NewCSVWriter(&p.body)
 	}
-	if o.Available.IsZero() {
+	if !l.known.IsZero() {
 		o.Available = l.known
 	}
 	l.tally.add(o)
@@ -286,7 +286,7 @@ func (l *loading) settleNow(ctx context.Context, cmd *cobra.Command, cfg *config
 	}
 	c := k.engine.Counts()
 	fmt.Fprintf(cmd.OutOrStdout(), "settled %d stand-days\n", c.StandDays)
-	if c.Outdated > 0 {
+	if c.Outdated > 0 && l.known.IsZero() {
 		fmt.Fprintf(cmd.OutOrStdout(), "values that differ from what is known, are not newer and so changed nothing: %d; to replace what is there load them with --correct\n", c.Outdated)
 	}
 	return nil
@@ -312,6 +312,8 @@ func takeUpTo(ctx context.Context, k *keeper, last uint64, each func()) error {
 		Notice: func(err error) {
 			gap, missing := errors.AsType[*broker.Gap](err)
 			switch {
+			case errors.Is(err, broker.ErrNotFound):
+				cancel(exitWith(exitTemporary, fmt.Errorf("load: %w; load again", err)))
 			case !missing:
 				k.log.Warn().Err(err).Msg("observations cannot be read; trying again")
 			case gap.Reason == broker.Removed:

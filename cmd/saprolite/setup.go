@@ -64,8 +64,19 @@ func standSetup(cfg *config.Config, reg *config.Register, s *config.Stand) engin
 		},
 	}
 	setup.Options.RainFrom = from(reg, s, quantity.Precipitation)
-	setup.Options.AirFrom = from(reg, s, quantity.AirTemperatureMax)
+	setup.Options.AirFrom = from(reg, s, evaporation(s))
 	return setup
+}
+
+// evaporation is what a stand's evapotranspiration hangs on first: what it
+// names, else air temperature.
+func evaporation(s *config.Stand) quantity.Quantity {
+	for _, q := range []quantity.Quantity{quantity.ActualEvapotranspiration, quantity.ReferenceEvapotranspiration} {
+		if _, named := s.Sources[q]; named {
+			return q
+		}
+	}
+	return quantity.AirTemperatureMax
 }
 
 // draws says where a stand takes each quantity from, each quantity's sources

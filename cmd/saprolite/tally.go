@@ -18,11 +18,21 @@ import (
 type tally map[quantity.Quantity]*tallied
 
 type tallied struct {
-	rows        int
-	sources     map[string]struct{}
-	first, last time.Time
-	low, high   float64
-	sum         float64
+	rows      int
+	sources   map[string]*span
+	low, high float64
+	sum       float64
+}
+
+type span struct{ first, last time.Time }
+
+func (s *span) with(t time.Time) {
+	if s.first.IsZero() || t.Before(s.first) {
+		s.first = t
+	}
+	if t.After(s.last) {
+		s.last = t
+	}
 }
 
 func (t *tally) add(o observation.Observation) {
@@ -31,17 +41,16 @@ func (t *tally) add(o observation.Observation) {
 	}
 	q := (*t)[o.Quantity]
 	if q == nil {
-		q = &tallied{sources: map[string]struct{}{}, first: o.Start, last: o.Start, low: math.Inf(1), high: math.Inf(-1)}
+		q = &tallied{sources: map[string]*span{}, low: math.Inf(1), high: math.Inf(-1)}
 		(*t)[o.Quantity] = q
 	}
 	q.rows++
-	q.sources[o.Source] = struct{}{}
-	if o.Start.Before(q.first) {
-		q.first = o.Start
+	source := q.sources[o.Source]
+	if source == nil {
+		source = &span{}
+		q.sources[o.Source] = source
 	}
-	if o.Start.After(q.last) {
-		q.last = o.Start
-	}
+	source.with(o.Start)
 	if !math.IsNaN(o.Value) {
 		q.low, q.high = math.Min(q.low, o.Value), math.Max(q.high, o.Value)
 		q.sum += o.Value
@@ -50,15 +59,23 @@ func (t *tally) add(o observation.Observation) {
 
 // say writes a line a quantity.
 func (t tally) say(w io.Writer) {
-	const year = 365*24*time.Hour + 5*time.Hour + 49*time.Minute // Gregorian calendar, to the minute
+	const day, year = 24 * time.Hour, 365 * 24 * time.Hour // to show, not to compute with
 	out := tabwriter.NewWriter(w, 0, 0, 2, ' ', 0)
 	for _, name := range slices.Sorted(maps.Keys(t)) {
-		q := t[name]
+		q, all, years := t[name], span{}, 0.0
+		for _, s := range q.sources {
+			all.with(s.first)
+			all.with(s.last)
+			years += float64(s.last.Sub(s.first)+day) / float64(year)
+		}
 		info, _ := name.Info()
-		fmt.Fprintf(out, "  %s\t%d rows\t%d sources\t%s to %s\t%.5g to %.5g %s", name, q.rows, len(q.sources),
-			q.first.Format(time.DateOnly), q.last.Format(time.DateOnly), q.low, q.high, info.Unit)
-		if span := q.last.Sub(q.first) + 24*time.Hour; info.Fold == quantity.Total && span > year {
-			fmt.Fprintf(out, "\t%.0f %s a year", q.sum/float64(len(q.sources))/(float64(span)/float64(year)), info.Unit)
+		values := "no values"
+		if q.low <= q.high {
+			values = fmt.Sprintf("%.5g to %.5g %s", q.low, q.high, info.Unit)
+		}
+		fmt.Fprintf(out, "  %s\t%d rows\t%d sources\t%s to %s\t%s", name, q.rows, len(q.sources), all.first.Format(time.DateOnly), all.last.Format(time.DateOnly), values)
+		if info.Fold == quantity.Total && years >= float64(len(q.sources)) {
+			fmt.Fprintf(out, "\t%.0f %s a year", q.sum/years, info.Unit)
 		}
 		fmt.Fprintln(out)
 	}

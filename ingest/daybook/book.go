@@ -209,8 +209,8 @@ func (b *Book) addToDay(d quantity.Day, q quantity.Quantity, how quantity.Fold, 
 	if err != nil {
 		return false, false, err
 	}
-	if known && c.Flag[i]&whole != 0 && len(list) == 0 {
-		list = append(list, Reading{Start: from, End: to, Value: had.Value, SD: had.SD, Flag: had.Flag, Available: had.Available.UnixNano()})
+	if known && c.Flag[i]&whole != 0 {
+		list, _, _ = insert(list, Reading{Start: from, End: to, Value: had.Value, SD: had.SD, Flag: had.Flag, Available: had.Available.UnixNano()})
 	}
 	list, written, outdated := insert(list, r)
 	v := fold(how, from, to, b.opts.Interval, list)

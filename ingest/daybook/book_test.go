@@ -154,6 +154,22 @@ func TestFold(t *testing.T) {
 			t.Errorf("%+v, want 7", v)
 		}
 	})
+	t.Run("a day known as missing does not hide the hours that came after all", func(t *testing.T) {
+		b := open(t, Options{Source: "gauge", Offset: offset})
+		missing := rainAt(offset, 0, 24, nan)
+		missing.Flag = observation.Missing
+		if _, err := b.Add(missing); err != nil {
+			t.Fatal(err)
+		}
+		for hour := range 24 {
+			if _, err := b.Add(rainAt(offset, float64(hour), 1, 1)); err != nil {
+				t.Fatal(err)
+			}
+		}
+		if v := day(t, b, quantity.Precipitation, first); !v.Known() || v.Value != 24 {
+			t.Errorf("%+v, want 24", v)
+		}
+	})
 	t.Run("known missing is missing, not zero", func(t *testing.T) {
 		b := open(t, Options{Source: "gauge", Offset: offset})
 		o := rainAt(offset, 0, 24, nan)

@@ -102,13 +102,13 @@ func fold(how quantity.Fold, from, to int64, expected time.Duration, list []Read
 		if r.End > r.Start && r.Start < last {
 			continue // overlaps one that already counts
 		}
-		last = max(last, r.End)
 		available = max(available, r.Available)
 		if !r.Flag.Usable() || math.IsNaN(r.Value) {
 			worst = max(worst, r.Flag)
 			unusable++
 			continue
 		}
+		last = max(last, r.End)
 		usable++
 		inside := min(r.End, to) - max(r.Start, from)
 		share, weight := 1.0, float64(inside)
@@ -159,7 +159,7 @@ func fold(how quantity.Fold, from, to int64, expected time.Duration, list []Read
 	}
 	v.SD = math.Sqrt(variance)
 	v.Value = sum
-	if how == quantity.Total && unusable > 0 {
+	if how == quantity.Total && unusable > 0 && covered < to-from {
 		v.Flag = observation.Suspect // a part of the total is not known
 	}
 	if how == quantity.Total && instants == 0 && covered < to-from {

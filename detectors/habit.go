@@ -21,7 +21,8 @@ const (
 	monthIsKnown = 20 // days before Month is used (methods A.1, weight of the monthly ratio)
 )
 
-// remember takes in a known day of a month, 1 to 12: measured evapotranspiration, or demand.
+// remember takes in a known day of a month, 1 to 12: measured
+// evapotranspiration, or coefficient x reference, mm a day.
 func (h *habit) remember(month int, v quantity.Millimetres, measured bool) {
 	x, n := float64(max(0, v)), &h.Days[month-1]
 	if h.Days == ([12]uint8{}) {

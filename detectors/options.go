@@ -32,8 +32,8 @@ type Options struct {
 
 // StoreLow are the settings of the alert of that name.
 type StoreLow struct {
-	// Left is the share of the store left below which each level holds, from
-	// drawing down to spent.
+	// Left is the share of the store left, 0 to 1, below which each level
+	// holds, from drawing down to spent.
 	Left      [4]float64
 	EnterDays int // days in a row that a level must hold to be entered
 	LeaveDays int // days in a row that it must not hold to be left
@@ -42,7 +42,7 @@ type StoreLow struct {
 // FeedSilent are the settings of the alert of that name.
 type FeedSilent struct {
 	Days      int // days without a value before a source counts as silent
-	BlindDays int // days without rain data before the account cannot be judged
+	BlindDays int // days without rain, or without data on evapotranspiration, before the account cannot be judged
 }
 
 // DefaultYearStart returns the day of the year the hydrological year begins

@@ -168,6 +168,7 @@ func (k *keeper) sayHeld(list []engine.Held) {
 }
 
 // mostHeldSaid bounds what is remembered of that: senders choose the names.
+// Common practice of the trade, no source.
 const mostHeldSaid = 1000
 
 // A save is due after so many messages (design 3.7); the daemon also saves

@@ -72,16 +72,9 @@ func (h *home) live(work func(d *daemon, feed *broker.Broker)) {
 // daily opens the books that were kept and writes the daily file.
 func (h *home) daily() string {
 	h.t.Helper()
-	cfg, reg, err := readBoth(h.file)
-	if err != nil {
-		h.t.Fatal(err)
-	}
-	d, err := openDaemon(context.Background(), cfg, reg, zerolog.Nop())
-	if err != nil {
-		h.t.Fatal(err)
-	}
+	d := h.opened(nil)
 	var out bytes.Buffer
-	err = errors.Join(d.keeper.engine.WriteDaily(&out, quantity.NoDay), d.close())
+	err := errors.Join(d.keeper.engine.WriteDaily(&out, quantity.NoDay), d.close())
 	if err != nil {
 		h.t.Fatal(err)
 	}

@@ -116,7 +116,7 @@ func indices(s *config.Stand) []quantity.Quantity {
 func draw(reg *config.Register, s *config.Stand, q quantity.Quantity, d config.Draw) engine.Draw {
 	out := engine.Draw{Quantity: q, Source: d.Source, Scale: 1, From: place(s, d)}
 	switch q {
-	case quantity.AirTemperature, quantity.AirTemperatureMin, quantity.AirTemperatureMax:
+	case quantity.AirTemperatureMin, quantity.AirTemperatureMax:
 		if !math.IsNaN(d.HeightM) && d.Source != s.ID {
 			out.Add = float64(climate.LapseOffset(s.Elevation-quantity.Metres(d.HeightM), s.Elevation))
 		}
@@ -128,7 +128,7 @@ func draw(reg *config.Register, s *config.Stand, q quantity.Quantity, d config.D
 	return out
 }
 
-// from says in words where a stand's first source of q is.
+// from says in words where a stand takes q from, in order of preference.
 func from(reg *config.Register, s *config.Stand, q quantity.Quantity) string {
 	list := reg.Draws(s, q)
 	if len(list) == 0 {

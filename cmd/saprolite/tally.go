@@ -73,11 +73,18 @@ func (t tally) say(w io.Writer) {
 		if q.low <= q.high {
 			values = fmt.Sprintf("%.5g to %.5g %s", q.low, q.high, info.Unit)
 		}
-		fmt.Fprintf(out, "  %s\t%d rows\t%d sources\t%s to %s\t%s", name, q.rows, len(q.sources), all.first.Format(time.DateOnly), all.last.Format(time.DateOnly), values)
+		fmt.Fprintf(out, "  %s\t%s\t%s\t%s to %s\t%s", name, counted(q.rows, "row"), counted(len(q.sources), "source"), all.first.Format(time.DateOnly), all.last.Format(time.DateOnly), values)
 		if info.Fold == quantity.Total && years >= float64(len(q.sources)) {
 			fmt.Fprintf(out, "\t%.0f %s a year", q.sum/years, info.Unit)
 		}
 		fmt.Fprintln(out)
 	}
 	out.Flush()
+}
+
+func counted(n int, word string) string {
+	if n == 1 {
+		return "1 " + word
+	}
+	return fmt.Sprintf("%d %ss", n, word)
 }

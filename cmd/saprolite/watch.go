@@ -168,6 +168,7 @@ func (w *watch) read() metrics.Snapshot {
 
 // stuckAfter is how long the loop may be silent: it turns every few seconds
 // at the least, and a large load or re-settling may keep it for some minutes.
+// Common practice of the trade, no source.
 const stuckAfter = 5 * time.Minute
 
 func (w *watch) alive() error {
